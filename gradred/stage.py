@@ -19,7 +19,7 @@ from pathlib import Path
 from typing import Annotated, Any, Final
 
 import xarray as xr
-from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict
+from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, ValidationInfo
 
 from gradred import survey
 from gradred.errors import SurveyError
@@ -55,8 +55,13 @@ KilogramsPerCubicMetre = Annotated[float, _in_unit("density", "kg/m3")]
 RadiansPerSecond = Annotated[float, _in_unit("rate", "rad/s")]
 
 
-InputFile = Path
-"""A file that the stage reads: resolved, looked for and hashed before anything runs."""
+def _resolved(path: Path, info: ValidationInfo) -> Path:
+    folder = (info.context or {}).get("folder")
+    return path if folder is None else (Path(folder) / path).resolve()
+
+
+InputFile = Annotated[Path, AfterValidator(_resolved)]
+"""A file that the stage reads: resolved against the folder of the pipeline file, then hashed."""
 
 
 def _epsg(value: str) -> str:
@@ -77,7 +82,8 @@ class Cost:
 
 
 Sizes = Mapping[str, float]
-"""Counts known before any computing: ``stations``, ``terrain_cells``, ``grid_nodes`` and so on."""
+"""What is known once the inputs are read: ``stations``, ``lines``, ``terrain_cells``, and the
+``width`` and ``length`` of the block in metres."""
 
 
 @dataclass(frozen=True)
@@ -92,6 +98,7 @@ class Stage:
     optional: tuple[str, ...]
     needs: Mapping[str, tuple[str, ...]]
     adds: tuple[str, ...]
+    gives: Callable[[Any], tuple[str, ...]] | None
     physics: Callable[..., Any] | None
     forecast: Callable[[Any, Sizes], Cost] | None
     writes: bool = field(default=False)
@@ -108,6 +115,7 @@ def stage(
     makes: str | None,
     needs: Mapping[str, tuple[str, ...]] | None = None,
     adds: tuple[str, ...] = (),
+    gives: Callable[[Any], tuple[str, ...]] | None = None,
     physics: Callable[..., Any] | None = None,
     forecast: Callable[[Any, Sizes], Cost] | None = None,
 ) -> Callable[[Callable[..., Any]], Callable[..., Any]]:
@@ -121,6 +129,8 @@ def stage(
         Per part that it takes, the variables that must be there.
     adds : tuple of str
         Variables that the returned part has afterwards, whatever it had before.
+    gives : function, optional
+        From the settings to further variables of the returned part (a reader's columns).
     physics : function, optional
         The function on bare arrays that holds formula, accuracy, source and check.
     forecast : function, optional
@@ -134,7 +144,9 @@ def stage(
 
     def declare(function: Callable[..., Any]) -> Callable[..., Any]:
         signature = inspect.signature(function)
-        contract = _contract(function, signature, makes, needs or {}, adds, physics, forecast)
+        contract = _contract(
+            function, signature, makes, needs or {}, adds, gives, physics, forecast
+        )
 
         @functools.wraps(function)
         def checked(*args: Any, **kwargs: Any) -> Any:
@@ -162,6 +174,7 @@ def _contract(
     makes: str | None,
     needs: Mapping[str, tuple[str, ...]],
     adds: tuple[str, ...],
+    gives: Callable[[Any], tuple[str, ...]] | None,
     physics: Callable[..., Any] | None,
     forecast: Callable[[Any, Sizes], Cost] | None,
 ) -> Stage:
@@ -181,6 +194,7 @@ def _contract(
         optional=optional,
         needs=needs,
         adds=adds,
+        gives=gives,
         physics=physics,
         forecast=forecast,
         writes="folder" in signature.parameters,
