@@ -1,0 +1,1 @@
+"""Parts → what people open: rasters, tables, models, figures, the report."""

@@ -1,0 +1,1 @@
+"""Files → parts: each reader refuses what it cannot vouch for."""

@@ -1,0 +1,1 @@
+"""Readings → density model: bodies and voxels, with their standard errors."""

@@ -1,0 +1,1 @@
+"""Lines → grid: harmonic gridding of all components together, and maps derived from it."""
