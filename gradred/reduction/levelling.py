@@ -32,13 +32,19 @@ class LevelSettings(Settings):
 
     order: int = Field(1, ge=0, le=3, description="order of the drift polynomial per line")
     window: Metres = Field(
-        150.0,
+        250.0,
         ge=10,
         le=2000,
         description="half width of the stretch of a line that estimates its reading at a crossing",
     )
-    drift_sd: Eotvos = Field(
-        10.0, ge=0.1, le=1000, description="expected size of each drift coefficient, E"
+    offset_sd: Eotvos = Field(
+        10.0, ge=0.01, le=1000, description="expected size of the offset of a line, E"
+    )
+    bend_sd: Eotvos = Field(
+        2.0,
+        ge=0.01,
+        le=1000,
+        description="expected size of each further drift coefficient (slope, bend) of a line, E",
     )
     datum: Literal["zero-mean", "kept"] = Field(
         "zero-mean",
@@ -62,11 +68,12 @@ def crossing_drift(
     basis: Any,
     difference: Any,
     *,
-    drift_sd: float,
+    expected: Array,
+    datum: Array | None = None,
 ) -> Drift:
     r"""Estimate the drift of every line from the differences at crossings, component by component.
 
-    .. math:: \min_p \sum_k w_k (d_k - (D B p)_k)^2 / s_k^2 + |p|^2 / τ^2
+    .. math:: \min_p \sum_k w_k (d_k - (D B p)_k)^2 / s_k^2 + \sum_j p_j^2 / τ_j^2
 
     with d = D Γ the differences at the crossings, D the weights that estimate them from the
     readings, B the drift polynomials, τ their expected size, s the standard deviation of a
@@ -81,8 +88,11 @@ def crossing_drift(
         Drift polynomials of every line at every station.
     difference : (k, n) sparse array
         First line minus second line at every crossing.
-    drift_sd : float
+    expected : (p,) array
         τ, E.
+    datum : (n,) array, optional
+        Weights that add up to 1: the standard deviation is that of the drift less its mean by
+        these weights, for readings whose constant is set by a rule of its own.
 
     Returns
     -------
@@ -92,7 +102,8 @@ def crossing_drift(
     Accuracy
     --------
     As its standard deviation says: near the noise of one reading over the root of the crossings
-    per line. One constant per component cannot be seen and is held near zero by τ.
+    per line. Crossings do not see what all lines have in common at their crossings: a constant,
+    and with slopes also a plane and its twist over the block; only τ holds these down.
 
     Source
     ------
@@ -110,21 +121,27 @@ def crossing_drift(
     drift, sigma = np.zeros_like(readings), np.zeros_like(readings)
     after = np.zeros(readings.shape[1])
     for c in range(readings.shape[1]):
-        coefficients, covariance = _robust_ridge(design, seen[:, c], spread, drift_sd)
+        coefficients, covariance = _robust_ridge(design, seen[:, c], spread, expected)
         drift[:, c] = basis @ coefficients
-        sigma[:, c] = np.sqrt((basis.multiply(basis @ covariance)).sum(axis=1))
+        variance = basis.multiply(basis @ covariance).sum(axis=1)
+        if datum is not None:
+            mean = datum @ basis
+            variance = variance - basis @ (2.0 * covariance @ mean) + mean @ covariance @ mean
+        sigma[:, c] = np.sqrt(variance)
         after[c] = np.sqrt(np.mean((seen[:, c] - design @ coefficients) ** 2))
     return Drift(drift, sigma, np.sqrt(np.mean(seen**2, axis=0)), after)
 
 
-def _robust_ridge(design: Array, seen: Array, spread: Array, prior: float) -> tuple[Array, Array]:
+def _robust_ridge(
+    design: Array, seen: Array, spread: Array, expected: Array
+) -> tuple[Array, Array]:
     """Return coefficients and their covariance, by reweighting until the scale is at rest."""
     weights = np.ones(len(seen))
     noise = max(_scale(seen / spread), 1e-6)
     for _ in range(_ROUNDS):
         scaled = np.sqrt(weights) / (spread * noise)
         normal = (design * scaled[:, None] ** 2).T @ design
-        normal[np.diag_indices_from(normal)] += prior**-2
+        normal[np.diag_indices_from(normal)] += expected**-2.0
         covariance = np.linalg.inv(normal)
         coefficients = covariance @ (design.T @ (scaled**2 * seen))
         residual = (seen - design @ coefficients) / spread
@@ -196,8 +213,12 @@ def level_lines(lines: xr.Dataset, settings: LevelSettings) -> xr.Dataset:
     _enough(int(both.sum()), len(names))
     basis = drift_basis(line, along, settings.order)
     gradient = lines["gradient"].to_numpy()
-    found = crossing_drift(gradient, basis, difference, drift_sd=settings.drift_sd)
-    amount = found.drift + _datum(lines, gradient - found.drift, good, settings.datum)
+    datum = _datum(lines, good) if settings.datum == "zero-mean" else None
+    expected = np.tile([settings.offset_sd] + settings.order * [settings.bend_sd], len(names))
+    found = crossing_drift(gradient, basis, difference, expected=expected, datum=datum)
+    amount = found.drift
+    if datum is not None:
+        amount = amount + datum @ np.nan_to_num(gradient - found.drift)
     unlevelled = sorted(set(names) - set(names[np.unique(crossings.line[both])]))
     return survey.subtract(
         lines,
@@ -212,11 +233,10 @@ def level_lines(lines: xr.Dataset, settings: LevelSettings) -> xr.Dataset:
     )
 
 
-def _datum(lines: xr.Dataset, levelled: Array, good: NDArray[np.bool_], rule: str) -> Array:
-    if rule == "kept":
-        return np.zeros(6)
-    traverses = good & (lines["kind"].to_numpy() == "traverse")
-    return np.asarray(levelled[traverses].mean(axis=0))
+def _datum(lines: xr.Dataset, good: NDArray[np.bool_]) -> Array:
+    """Return (n,) weights of the mean over the good readings of the traverses."""
+    chosen = good & (lines["kind"].to_numpy() == "traverse")
+    return np.asarray(chosen / max(np.count_nonzero(chosen), 1))
 
 
 def _enough(crossings: int, lines: int) -> None:
