@@ -1,9 +1,9 @@
 """The chain backwards: bodies, terrain and flight → readings of a gradiometer.
 
 Everything is written from the physics and calls no stage of the reduction, so that the two check
-each other. ``fly`` turns a path and an attitude into motion with exact rates, ``field`` gives the
-true tensor at the stations, ``read`` is the instrument, ``nine_elements`` and ``six_elements``
-write what it delivers.
+each other. ``flight.fly`` turns a path and an attitude into motion with exact rates, ``field``
+gives the true tensor at the stations, ``read`` is the instrument; ``drift`` and ``white_noise``
+are its faults, and ``lines_part`` hands its readings to a chain without going through a file.
 
 Grid distances are taken as metres on the ground: the scale of the projection is left out here as
 it is in the reduction.
@@ -16,26 +16,27 @@ from dataclasses import dataclass, fields
 from typing import Final
 
 import numpy as np
-import pandas as pd
+import xarray as xr
 from numpy.typing import NDArray
 from pyproj import Transformer
-from scipy.interpolate import make_interp_spline
-from scipy.ndimage import gaussian_filter1d
 
-from gradred.newton import (
-    normal_tensor,
-    polyhedron_tensor,
-    prism_tensor,
-    sphere_tensor,
-    terrain_tensor,
-    tide_tensor,
-)
+from gradred import survey
+from gradred.flight import Motion, Stations
+from gradred.newton.bodies import polyhedron_tensor, prism_tensor, sphere_tensor
+from gradred.newton.ellipsoid import normal_tensor
+from gradred.newton.heightfield import terrain_tensor
 from gradred.newton.sheet import dipping_sheet
-from gradred.tensor import Rotation, body_to_enu, enu_to_grid, from_matrix, ned_to_body, to_matrix
-from gradred.units import EARTH_RATE, EOTVOS
+from gradred.newton.tides import tide_tensor
+from gradred.tensor import (
+    axial_vector,
+    body_to_enu,
+    enu_to_grid,
+    from_matrix,
+    to_matrix,
+)
+from gradred.units import EOTVOS
 
 Array = NDArray[np.float64]
-Times = NDArray[np.datetime64]
 
 ELEMENTS: Final = tuple(f"m{row}{column}" for row in "xyz" for column in "xyz")
 """Names of the nine elements of a reading, row by row."""
@@ -134,201 +135,10 @@ class Layer:
         )
 
 
-@dataclass(frozen=True)
-class Motion:
-    """Where the instrument is, how it is turned, and how fast it turns.
-
-    Parameters
-    ----------
-    time : (n,) array
-        UTC.
-    longitude, latitude, height : (n,) arrays
-        Geodetic degrees; metres above the ellipsoid.
-    heading, pitch, roll : (n,) arrays
-        Degrees.
-    rates : (n, 3) array
-        ω of the instrument relative to inertial space, ``body`` axes, rad/s.
-    acceleration : (n, 3) array
-        dω/dt, rad/s².
-    """
-
-    time: Times
-    longitude: Array
-    latitude: Array
-    height: Array
-    heading: Array
-    pitch: Array
-    roll: Array
-    rates: Array
-    acceleration: Array
-
-    @classmethod
-    def join(cls, parts: Sequence[Motion]) -> Motion:
-        """Return the motions one after another."""
-        return cls(
-            *(np.concatenate([getattr(part, f.name) for part in parts]) for f in fields(cls))
-        )
-
-
-def wander(random: np.random.Generator, size: int, correlation: float) -> Array:
-    """Return a smooth random series of unit expected variance: white noise through a Gaussian.
-
-    Parameters
-    ----------
-    random : Generator
-        Source of the white noise.
-    size : int
-        Length of the series, samples.
-    correlation : float
-        Standard deviation of the Gaussian, samples, at least 1.
-
-    Returns
-    -------
-    (size,) array
-    """
-    margin = int(np.ceil(5.0 * correlation))
-    white = random.standard_normal(size + 2 * margin)
-    smooth = gaussian_filter1d(white, correlation, truncate=5.0, mode="constant")
-    # the squared weights of a Gaussian of standard deviation s sum to 1 / (2 s √π)
-    return np.asarray(smooth[margin:-margin] * np.sqrt(2.0 * correlation * np.sqrt(np.pi)))
-
-
-def navigation_rate(latitude: Array, longitude_rate: Array, latitude_rate: Array) -> Array:
-    r"""Rate of the local north-east-down axes relative to inertial space, in the ``ned`` frame.
-
-    .. math:: ω_{in} = \bigl((Ω + \dot λ) \cos φ,\; -\dot φ,\; -(Ω + \dot λ) \sin φ\bigr)
-
-    Earth rate Ω about the Earth's axis and the transport rate of a moving geodetic vertical.
-
-    Parameters
-    ----------
-    latitude : (n,) array
-        φ, geodetic, radians.
-    longitude_rate, latitude_rate : (n,) arrays
-        rad/s.
-
-    Returns
-    -------
-    (n, 3) array
-        rad/s.
-
-    Accuracy
-    --------
-    Exact for geodetic coordinates on any ellipsoid of revolution; the motion of the pole and the
-    change of Ω (1e-8 of it) are left out.
-
-    Source
-    ------
-    Groves 2013, Principles of GNSS, Inertial, and Multisensor Integrated Navigation Systems,
-    2nd edition, Artech House, section 5.4; from memory.
-
-    Checked by
-    ----------
-    ``tests/test_simulate.py`` against the differentiated rotation of an Earth-fixed frame that
-    spins.
-    """
-    spin = EARTH_RATE + longitude_rate
-    return np.stack([spin * np.cos(latitude), -latitude_rate, -spin * np.sin(latitude)], axis=-1)
-
-
-def _attitude_rate(angle: Array, first: Array, second: Array) -> tuple[Array, Array]:
-    """Return the rate of body relative to ned, body axes, and its derivative.
-
-    ``angle``, ``first`` and ``second`` are (3, n): heading, pitch, roll in radians and their first
-    and second derivatives. Differentiated term by term from the yaw–pitch–roll sequence (Stevens,
-    Lewis and Johnson 2016, Aircraft Control and Simulation, 3rd edition, eq. 1.4-3; equation
-    number from memory).
-    """
-    _, pitch, roll = angle
-    h1, p1, r1 = first
-    h2, p2, r2 = second
-    sp, cp, sr, cr = np.sin(pitch), np.cos(pitch), np.sin(roll), np.cos(roll)
-    rate = np.stack([r1 - h1 * sp, p1 * cr + h1 * cp * sr, h1 * cp * cr - p1 * sr], axis=-1)
-    change = np.stack(
-        [
-            r2 - h2 * sp - h1 * p1 * cp,
-            p2 * cr - p1 * r1 * sr + h2 * cp * sr - h1 * p1 * sp * sr + h1 * r1 * cp * cr,
-            h2 * cp * cr - h1 * p1 * sp * cr - h1 * r1 * cp * sr - p2 * sr - p1 * r1 * cr,
-        ],
-        axis=-1,
-    )
-    return rate, change
-
-
-def fly(start: np.datetime64, knots: Array, path: Array, attitude: Array, at: Array) -> Motion:
-    r"""Motion along a path with an attitude, with inertial rates in the ``body`` frame.
-
-    .. math:: ω = ω_{nb} + C_{bn} ω_{in}, \quad
-        \dot ω = \dot ω_{nb} + C_{bn} \dot ω_{in} - ω_{nb} × C_{bn} ω_{in}
-
-    Positions and angles are quintic splines through the knots, and every derivative is the exact
-    derivative of those splines: rates, accelerations and attitude belong together to rounding.
-
-    Parameters
-    ----------
-    start : datetime64
-        UTC of second 0.
-    knots : (k,) array
-        Seconds, ascending, k at least 6.
-    path : (k, 3) array
-        Longitude and latitude, degrees, and ellipsoidal height, metres.
-    attitude : (k, 3) array
-        Heading (not wrapped), pitch, roll, degrees.
-    at : (n,) array
-        Seconds of the stations, within the knots; to the nanosecond.
-
-    Returns
-    -------
-    Motion
-
-    Accuracy
-    --------
-    Rounding: 1e-12 of the rates.
-
-    Source
-    ------
-    Composition of rates: Groves 2013, as in ``navigation_rate``.
-
-    Checked by
-    ----------
-    ``tests/test_simulate.py`` against differentiated rotation matrices, Earth rate included.
-    """
-    radians = np.concatenate([np.radians(path[:, :2]), path[:, 2:], np.radians(attitude)], axis=1)
-    spline = make_interp_spline(knots, radians, k=5)
-    value, first, second = (spline(at, nu=order).T for order in range(3))
-    longitude, latitude = value[:2]
-    in_ned = navigation_rate(latitude, first[0], first[1])
-    spin = EARTH_RATE + first[0]
-    sine, cosine = np.sin(latitude), np.cos(latitude)
-    in_ned_change = np.stack(
-        [
-            second[0] * cosine - spin * sine * first[1],
-            -second[1],
-            -second[0] * sine - spin * cosine * first[1],
-        ],
-        axis=-1,
-    )
-    degrees = np.degrees(value[3:])
-    to_body = ned_to_body(*degrees)
-    rate, change = _attitude_rate(value[3:], first[3:], second[3:])
-    carried = to_body.vector(in_ned)
-    return Motion(
-        time=start + np.round(at * 1e9).astype("timedelta64[ns]"),
-        longitude=np.degrees(longitude),
-        latitude=np.degrees(latitude),
-        height=value[2],
-        heading=degrees[0] % 360.0,
-        pitch=degrees[1],
-        roll=degrees[2],
-        rates=rate + carried,
-        acceleration=change + to_body.vector(in_ned_change) - np.cross(rate, carried),
-    )
-
-
-def grid_points(motion: Motion, crs: str) -> Array:
+def grid_points(stations: Stations, crs: str) -> Array:
     """Return (n, 3) easting, northing in the CRS and ellipsoidal height, metres."""
     project = Transformer.from_crs("EPSG:4326", crs, always_xy=True).transform
-    return np.stack([*project(motion.longitude, motion.latitude), motion.height], axis=-1)
+    return np.stack([*project(stations.longitude, stations.latitude), stations.height], axis=-1)
 
 
 def grid_north(longitude: Array, latitude: Array, crs: str) -> Array:
@@ -345,7 +155,7 @@ def grid_north(longitude: Array, latitude: Array, crs: str) -> Array:
 
 
 def field(
-    motion: Motion,
+    stations: Stations,
     crs: str,
     bodies: Sequence[Sphere | Prism | Sheet] = (),
     layers: Sequence[Layer] = (),
@@ -354,8 +164,8 @@ def field(
 
     Parameters
     ----------
-    motion : Motion
-        Stations.
+    stations : Stations
+        Where the field is wanted.
     crs : str
         Projected CRS of bodies and layers; their heights are ellipsoidal.
     bodies, layers : sequences
@@ -379,12 +189,139 @@ def field(
     ----------
     ``tests/test_simulate.py``: sphere over flat ground against its closed form.
     """
-    points = grid_points(motion, crs)
-    to_enu = enu_to_grid(grid_north(motion.longitude, motion.latitude, crs)).inverse()
+    points = grid_points(stations, crs)
+    to_enu = enu_to_grid(grid_north(stations.longitude, stations.latitude, crs)).inverse()
     none = np.zeros((len(points), 6))
     return {
         "bodies": to_enu.tensor(sum((body.tensor(points) for body in bodies), none)),
         "terrain": to_enu.tensor(sum((layer.tensor(points) for layer in layers), none)),
-        "normal": normal_tensor(motion.latitude, motion.height),
-        "tide": tide_tensor(motion.time, motion.longitude, motion.latitude, motion.height),
+        "normal": normal_tensor(stations.latitude, stations.height),
+        "tide": tide_tensor(stations.time, stations.longitude, stations.latitude, stations.height),
     }
+
+
+def read(motion: Motion, gradient: Array, self_gradient: Array | None = None) -> Array:
+    r"""Return what a perfect instrument on the moving platform reads, in the ``body`` frame.
+
+    .. math:: M = Γ - ΩΩ - \dot Ω, \quad Ω = [ω×], \quad ΩΩ = ω ω^T - |ω|^2 I
+
+    Parameters
+    ----------
+    motion : Motion
+        Attitude and rates at the stations.
+    gradient : (n, 6) array
+        True tensor of everything outside the aircraft, E, ``enu``.
+    self_gradient : (6,) array, optional
+        The aircraft's own tensor, E, constant in ``body``.
+
+    Returns
+    -------
+    (n, 3, 3) array
+        E; neither symmetric nor free of trace.
+
+    Accuracy
+    --------
+    Rounding: 1e-16 of its largest part, 1e-10 E at an angular acceleration of 1e-3 rad/s².
+
+    Source
+    ------
+    Hofmann-Wellenhof and Moritz 2006, Physical Geodesy, 2nd edition, section 7: acceleration in a
+    rotating frame, differentiated; section number from memory.
+
+    Checked by
+    ----------
+    ``tests/test_simulate.py``: trace, and the relative motion of free-falling points seen from
+    the turning axes.
+    """
+    to_body = body_to_enu(motion.heading, motion.pitch, motion.roll).inverse()
+    there = to_body.tensor(gradient)
+    if self_gradient is not None:
+        there = there + self_gradient
+    rates = motion.rates
+    square = np.einsum("ni,ni->n", rates, rates)[:, None, None] * np.eye(3)
+    centrifugal = rates[:, :, None] * rates[:, None, :] - square
+    return to_matrix(there) - (centrifugal + cross_matrix(motion.acceleration)) / EOTVOS
+
+
+def cross_matrix(vector: Array) -> Array:
+    """Return the (n, 3, 3) matrices [v×] of (n, 3) vectors: [v×] w = v × w."""
+    x, y, z = np.moveaxis(vector, -1, 0)
+    none = np.zeros_like(x)
+    return np.stack([none, -z, y, z, none, -x, -y, x, none], axis=-1).reshape(*x.shape, 3, 3)
+
+
+def drift(
+    random: np.random.Generator, line: NDArray[np.intp], *, constant: float, tilt: float
+) -> Array:
+    """Drift of the instrument that starts anew on every line, each element on its own.
+
+    Parameters
+    ----------
+    random : Generator
+        Source of the numbers.
+    line : (n,) int array
+        Number of the line of each station, from 0; stations of a line in order of time.
+    constant : float
+        Standard deviation of a line's mean drift, E.
+    tilt : float
+        Standard deviation of the change from a line's first to its last station, E.
+
+    Returns
+    -------
+    (n, 3, 3) array
+        E, in the frame of the reading.
+    """
+    out = np.empty((len(line), 3, 3))
+    for number in range(int(line.max()) + 1):
+        here = np.flatnonzero(line == number)
+        along = np.linspace(-0.5, 0.5, len(here))[:, None, None]
+        mean, change = random.standard_normal((2, 3, 3))
+        out[here] = constant * mean + tilt * change * along
+    return out
+
+
+def white_noise(random: np.random.Generator, count: int, sigma: float) -> Array:
+    """Return (count, 3, 3) noise, E: nine independent elements, white along the line.
+
+    Of the symmetric part the diagonal has the standard deviation ``sigma`` and the rest
+    ``sigma / √2``, per reading and without any filter.
+    """
+    return sigma * random.standard_normal((count, 3, 3))
+
+
+def lines_part(
+    motion: Motion,
+    crs: str,
+    reading: Array,
+    *,
+    line: Sequence[str],
+    flight: Sequence[str],
+    kind: Sequence[str],
+) -> xr.Dataset:
+    """Return the ``lines`` part of nine-element readings, as if it had been read from a file.
+
+    Parameters
+    ----------
+    motion : Motion
+        Stations, attitude and rates.
+    crs : str
+        Survey CRS.
+    reading : (n, 3, 3) array
+        E, ``body``.
+    line, flight, kind : (n,) sequences of str
+        Names of line and flight; traverse, tie or repeat.
+    """
+    easting, northing, _ = grid_points(motion, crs).T
+    columns = {f.name: getattr(motion, f.name) for f in fields(motion) if f.name != "acceleration"}
+    columns |= {"easting": easting, "northing": northing, "line": line, "flight": flight}
+    columns["kind"] = kind
+    columns["convergence"] = grid_north(motion.longitude, motion.latitude, crs)
+    columns["flag"] = np.zeros(len(easting))
+    columns["antisymmetric"] = axial_vector(reading)
+    data = survey.new("lines", crs)
+    for name, values in columns.items():
+        frame = "body" if name in ("rates", "antisymmetric") else None
+        data = survey.put("lines", data, name, values, frame=frame)
+    for name in ("gradient", "as_read"):
+        data = survey.put("lines", data, name, from_matrix(reading), frame="body")
+    return data
