@@ -22,9 +22,10 @@ from pyproj import Transformer
 
 from gradred import survey
 from gradred.flight import Motion, Stations
-from gradred.newton.bodies import polyhedron_tensor, prism_tensor, sphere_tensor
+from gradred.newton.bodies import prism_tensor, sphere_tensor
 from gradred.newton.ellipsoid import normal_tensor
 from gradred.newton.heightfield import terrain_tensor
+from gradred.newton.polyhedron import polyhedron_tensor
 from gradred.newton.sheet import dipping_sheet
 from gradred.newton.tides import tide_tensor
 from gradred.tensor import (
