@@ -49,7 +49,7 @@ def _inputs(pipeline: Pipeline) -> dict[str, xr.Dataset]:
 
 
 def sizes_of(parts: Mapping[str, xr.Dataset]) -> dict[str, float]:
-    """Return what forecasts go by: stations, lines, terrain cells, extent of the block in metres."""
+    """Return what forecasts go by: stations, lines, terrain cells, extent of the block, m."""
     sizes = {"stations": 0.0, "lines": 0.0, "terrain_cells": 0.0, "width": 0.0, "length": 0.0}
     if "lines" in parts:
         lines = parts["lines"]
