@@ -13,6 +13,7 @@ _LN2_HIGH = 6.93147180369123816490e-01
 _LN2_LOW = 1.90821492927058770002e-10
 # bits of sqrt(1/2): the cut between exponents, so that x = 2^k m with m about 1
 _SQRT_HALF = np.int64(0x3FE6A09E667F3BCD)
+_HALF_STEP = np.int64(1 << 51)
 _TAN_PI_8 = 0.41421356237309503
 _HALF_PI = 1.5707963267948966
 
@@ -34,23 +35,25 @@ def fast_log(x: float) -> float:
 
 
 @njit(inline="never", forceinline=True, error_model="numpy", cache=True)
-def fast_atanh2(q: float) -> float:
-    """Twice the inverse hyperbolic tangent, |q| < 1, to four units in the last place also near 0.
+def fast_atanh2(top: float, bottom: float) -> float:
+    """Twice the inverse hyperbolic tangent of top / bottom, 0 <= |top| < bottom, by one division.
 
-    ln((1 + q) / (1 - q)) with the series of ``fast_log``, which is one in q itself where |q| is
-    below 0.17, so that nothing cancels.
+    ln((bottom + top) / (bottom - top)) with the series of ``fast_log``: the ratio is 2^k m, k from
+    the exponents alone, and the series runs in (m - 1) / (m + 1), which is top / bottom itself
+    where that is small, so that nothing cancels. Four units in the last place.
     """
-    ratio = (1.0 + q) / (1.0 - q)
-    bits = np.float64(ratio).view(np.int64)
-    k = (bits - _SQRT_HALF) >> np.int64(52)
-    m = np.int64(bits - (k << np.int64(52))).view(np.float64)
-    s = q if k == 0 else (m - 1.0) / (m + 1.0)
+    above = bottom + top
+    below = bottom - top
+    ones = np.float64(above).view(np.int64) - np.float64(below).view(np.int64)
+    k = (ones + _HALF_STEP) >> np.int64(52)
+    scaled = below * np.int64((k + np.int64(1023)) << np.int64(52)).view(np.float64)
+    s = (2.0 * top if k == 0 else above - scaled) / (2.0 * bottom if k == 0 else above + scaled)
     return k * _LN2_HIGH + (2.0 * s + (s * _series(s * s) + k * _LN2_LOW))
 
 
 @njit(inline="never", forceinline=True, error_model="numpy", cache=True)
 def _series(z: float) -> float:
-    """Return (2 atanh(s) - 2 s) / s for z = s², |s| < 0.1716."""
+    """Return (2 atanh(s) - 2 s) / s for z = s²; coefficients for |s| < 0.1716, good to 0.2."""
     return z * (
         6.666666666666735130e-01
         + z

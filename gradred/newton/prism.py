@@ -71,17 +71,14 @@ def _edges(
     r_ij and q_ij are the distances of the two ends of the edge at (x_i, y_j). Differences of
     distances are taken from differences of their squares, which are exact.
     """
-    s11 = r11 + q11
-    s12 = r12 + q12
-    s21 = r21 + q21
-    s22 = r22 + q22
-    step = (x1 - x2) * (x1 + x2)
-    near = length * step * (1.0 / (r11 + r21) + 1.0 / (q11 + q21))
-    far = length * step * (1.0 / (r12 + r22) + 1.0 / (q12 + q22))
+    r1, q1 = r11 + r21, q11 + q21
+    r2, q2 = r12 + r22, q12 + q22
     square = length * length
-    p1 = near / (s11 * s21 - square)
-    p2 = far / (s12 * s22 - square)
-    return fast_atanh2((p2 - p1) / (1.0 - p1 * p2))
+    # tanh of half the difference over x at y1 and y2, as fractions: n1 / d1 and n2 / d2
+    scale = length * (x1 - x2) * (x1 + x2)
+    n1, d1 = scale * (r1 + q1), r1 * q1 * ((r11 + q11) * (r21 + q21) - square)
+    n2, d2 = scale * (r2 + q2), r2 * q2 * ((r12 + q12) * (r22 + q22) - square)
+    return fast_atanh2(n2 * d1 - n1 * d2, d1 * d2 - n1 * n2)
 
 
 @njit(inline="never", forceinline=True, error_model="numpy", cache=True)
@@ -325,7 +322,7 @@ def _edge(x: float, y: float, z1: float, z2: float, least: float) -> float:
     if least > 0.0:
         return edge_log(x, y, z1, z2, least)
     square = x * x + y * y
-    return fast_atanh2((z2 - z1) / (math.sqrt(square + z1 * z1) + math.sqrt(square + z2 * z2)))
+    return fast_atanh2(z2 - z1, math.sqrt(square + z1 * z1) + math.sqrt(square + z2 * z2))
 
 
 @njit(error_model="numpy", cache=True)
