@@ -25,8 +25,9 @@ Array = NDArray[np.float64]
 PUBLISHED = json.loads((Path(__file__).parents[1] / "published" / "prism.json").read_text())
 BOX = np.array([[-50.0, 50.0, -40.0, 60.0, -130.0, -20.0]])
 
-sides = st.floats(1.0, 100.0)
-places = st.lists(st.floats(-400.0, 400.0), min_size=3, max_size=3)
+# whole sides and places between: no place lies on an edge, where the value is that of a rule
+sides = st.integers(1, 100).map(float)
+places = st.lists(st.integers(-400, 400).map(lambda n: n + 0.37), min_size=3, max_size=3)
 
 
 @pytest.mark.parametrize("case", PUBLISHED["cases"], ids=lambda case: str(case["kind"]))
@@ -179,7 +180,7 @@ def test_every_distance_against_fifty_digits(shape: tuple[int, int, int]) -> Non
 
 
 @settings(deadline=None, max_examples=30)
-@given(places, sides, sides, sides, st.floats(0.1, 0.9))
+@given(places, sides, sides, sides, st.integers(1, 9).map(lambda n: n / 10))
 def test_a_prism_cut_in_two_is_the_same(
     at: list[float], a: float, b: float, c: float, share: float
 ) -> None:
