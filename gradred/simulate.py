@@ -13,7 +13,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, fields
-from typing import Final
+from typing import Final, Literal
 
 import numpy as np
 import xarray as xr
@@ -24,7 +24,7 @@ from gradred import survey
 from gradred.flight import Motion, Stations
 from gradred.newton.bodies import prism_tensor, sphere_tensor
 from gradred.newton.ellipsoid import normal_tensor
-from gradred.newton.heightfield import terrain_tensor
+from gradred.newton.heightfield import exact_terrain_tensor, terrain_tensor
 from gradred.newton.polyhedron import polyhedron_tensor
 from gradred.newton.sheet import dipping_sheet
 from gradred.newton.tides import tide_tensor
@@ -99,12 +99,12 @@ class Sheet:
 
 @dataclass(frozen=True)
 class Layer:
-    """Mass of one density between a surface and a level base, as flat-topped cells.
+    """Mass of one density between a surface and a level base.
 
     Parameters
     ----------
     heights : (n_northing, n_easting) array
-        Height of the surface in every cell, metres; rows along northing.
+        Height of the surface at every cell centre, metres; rows along northing.
     easting, northing : (n_easting,), (n_northing,) arrays
         Cell centres, metres, ascending.
     density : float
@@ -112,7 +112,9 @@ class Layer:
     base : float
         Height of its lower side, metres, in the vertical reference of ``heights``.
     tolerance : float
-        Largest error of its tensor, E.
+        Largest error of its tensor, E; 0 sums every cell in closed form, at every station.
+    surface : str
+        "prism", one flat-topped column per cell, or "bilinear" between cell centres.
     """
 
     heights: Array
@@ -121,18 +123,21 @@ class Layer:
     density: float
     base: float
     tolerance: float = 0.001
+    surface: Literal["prism", "bilinear"] = "prism"
 
     def tensor(self, points: Array) -> Array:
         """Return (n, 6) E in the ``grid`` frame at (n, 3) points, metres."""
+        model = (points, self.heights, self.easting, self.northing)
+        if self.tolerance == 0.0:
+            return exact_terrain_tensor(
+                *model, density=self.density, base=self.base, surface=self.surface
+            )
         return terrain_tensor(
-            points,
-            self.heights,
-            self.easting,
-            self.northing,
+            *model,
             density=self.density,
             base=self.base,
             tolerance=self.tolerance,
-            surface="prism",
+            surface=self.surface,
         )
 
 

@@ -24,7 +24,7 @@ def rough_flight(at: Array, seed: int = 3) -> Motion:
 
 
 def body_to_inertial(motion: Motion, at: Array) -> Array:
-    """Return (n, 3, 3) from body axes to axes that do not turn: the Earth's, turned by its rotation."""
+    """Return (n, 3, 3) from body axes to axes that do not turn with the Earth."""
     angle = np.radians(motion.longitude) + EARTH_RATE * at
     latitude = np.radians(motion.latitude)
     sl, cl, sp, cp = np.sin(angle), np.cos(angle), np.sin(latitude), np.cos(latitude)
