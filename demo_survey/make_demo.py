@@ -106,7 +106,7 @@ def make_terrain() -> Terrain:
     little as weathered ground is.
     """
     count = round((SIDE + 2.0 * MARGIN) / CELL)
-    centres: Array = (np.arange(count) + 0.5) * CELL - MARGIN
+    centres = np.arange(0.5, count) * CELL - MARGIN
     random = np.random.default_rng(SEEDS["terrain"])
     # the model is cut from a period of twice its size, so that its edges do not meet
     white = np.fft.rfft2(random.standard_normal((2 * count, 2 * count)))
@@ -184,15 +184,20 @@ def ground(terrain: Terrain) -> simulate.Layer:
     )
 
 
-def readings(survey: Survey, field: dict[str, Array]) -> tuple[Array, Array]:
-    """Return the (n, 3, 3) readings and the drift in them, E, in the body frame."""
+def faults(survey: Survey) -> tuple[Array, Array]:
+    """Return the (n, 3, 3) drift and noise of the instrument, E, in the body frame."""
     drift = simulate.drift(
         np.random.default_rng(SEEDS["drift"]), survey.line, constant=DRIFT, tilt=TILT
     )
     noise = simulate.white_noise(np.random.default_rng(SEEDS["noise"]), len(survey.line), SIGMA)
+    return drift, noise
+
+
+def without_faults(motion: Motion, terrain: Terrain) -> tuple[Array, dict[str, Array]]:
+    """Return the (n, 3, 3) perfect readings, body, and the parts of the field, enu, in E."""
+    field = simulate.field(motion, CRS, BODIES, [ground(terrain)])
     outside = np.sum(list(field.values()), axis=0)
-    perfect = simulate.read(survey.motion, outside, np.array(SELF_GRADIENT))
-    return perfect + drift + noise, drift
+    return simulate.read(motion, outside, np.array(SELF_GRADIENT)), field
 
 
 def clearance(survey: Survey, terrain: Terrain) -> Array:
@@ -295,11 +300,11 @@ def main() -> None:
     write_terrain(make_terrain())
     terrain = read_terrain()
     survey = fly_block(terrain)
-    field = simulate.field(survey.motion, CRS, BODIES, [ground(terrain)])
-    reading, drift = readings(survey, field)
+    perfect, field = without_faults(survey.motion, terrain)
+    drift, noise = faults(survey)
     above_ground = clearance(survey, terrain)
     altimeter = np.random.default_rng(SEEDS["altimeter"]).standard_normal(len(above_ground))
-    write_lines(survey, above_ground + ALTIMETER_SIGMA * altimeter, reading)
+    write_lines(survey, above_ground + ALTIMETER_SIGMA * altimeter, perfect + drift + noise)
     text = json.dumps(truth(above_ground), indent=2, ensure_ascii=False)
     (FOLDER / "truth.json").write_text(text + "\n", encoding="utf-8")
     np.savez_compressed(

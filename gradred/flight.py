@@ -42,6 +42,10 @@ class Stations:
             *(np.concatenate([getattr(part, f.name) for part in parts]) for f in fields(cls))
         )
 
+    def select(self, index: NDArray[np.intp] | slice) -> Self:
+        """Return the stations of an index, in its order."""
+        return type(self)(*(getattr(self, f.name)[index] for f in fields(self)))
+
 
 @dataclass(frozen=True)
 class Motion(Stations):

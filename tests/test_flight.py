@@ -84,11 +84,12 @@ def test_positions_and_angles_pass_through_the_knots() -> None:
     assert motion.time[3] - motion.time[0] == np.timedelta64(3_000_000_000, "ns")
 
 
-def test_stations_are_joined_in_order() -> None:
+def test_stations_are_joined_and_selected_in_order() -> None:
     one, two = rough_flight(np.array([1.0, 2.0])), rough_flight(np.array([7.0]))
     both = Motion.join([one, two])
     assert list(both.time) == [*one.time, *two.time]
     np.testing.assert_array_equal(both.rates, np.concatenate([one.rates, two.rates]))
+    np.testing.assert_array_equal(both.select(np.array([2])).rates, two.rates)
 
 
 @pytest.mark.parametrize("correlation", [1.0, 5.0, 20.0])

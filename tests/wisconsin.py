@@ -90,11 +90,11 @@ def simulate_wisconsin() -> Wisconsin:
         table["lat_deg"].to_numpy(),
         table["alt_m"].to_numpy() + GEOID_SEPARATION,
     )
-    ground = simulate.Layer(surface, easting, northing, GROUND_DENSITY, base=0.0)
+    ground = simulate.Layer(surface, easting, northing, GROUND_DENSITY, base=0.0, tolerance=0.0)
     parts = simulate.field(stations, CRS, layers=[ground])
     rim = (easting[0] - 100.0, easting[-1] + 100.0, northing[0] - 100.0, northing[-1] + 100.0)
     level = simulate.Prism(*rim, bottom=0.0, top=float(rock.mean()), density=-CONTRAST)
-    excess = simulate.Layer(rock, easting, northing, CONTRAST, base=0.0)
+    excess = simulate.Layer(rock, easting, northing, CONTRAST, base=0.0, tolerance=0.0)
     bedrock = simulate.field(stations, CRS, [level], [excess])
     anomaly = bedrock["bodies"] + bedrock["terrain"]
     noise = SIGMA * np.random.default_rng(SEED).standard_normal(anomaly.shape)
