@@ -18,7 +18,7 @@ import numpy as np
 import rasterio
 from numpy.typing import NDArray
 from pyproj import Transformer
-from rasterio.transform import from_origin
+from rasterio import Affine
 from scipy.interpolate import RectBivariateSpline
 from scipy.ndimage import gaussian_filter, map_coordinates
 
@@ -207,7 +207,7 @@ def clearance(survey: Survey, terrain: Terrain) -> Array:
     return np.asarray(height - map_coordinates(terrain.ellipsoidal(), place, order=1))
 
 
-def write_lines(survey: Survey, above_ground: Array, reading: Array) -> None:
+def write_lines(folder: Path, survey: Survey, above_ground: Array, reading: Array) -> None:
     """Write one gzipped table per flight."""
     motion = survey.motion
     columns: dict[str, Any] = {
@@ -227,15 +227,16 @@ def write_lines(survey: Survey, above_ground: Array, reading: Array) -> None:
         text = "\n".join([",".join(COLUMNS), *rows, ""])
         # gzip.compress writes no name, and with mtime=0 no time: the same bytes at every run
         packed = gzip.compress(text.encode(), 9, mtime=0)
-        (FOLDER / f"lines_{flight}.csv.gz").write_bytes(packed)
+        (folder / f"lines_{flight}.csv.gz").write_bytes(packed)
 
 
-def write_terrain(terrain: Terrain) -> None:
+def write_terrain(folder: Path, terrain: Terrain) -> None:
     """Write the model as a GeoTIFF, row 0 north."""
-    corner = from_origin(terrain.easting[0] - CELL / 2, terrain.northing[-1] + CELL / 2, CELL, CELL)
+    west, north = terrain.easting[0] - CELL / 2, terrain.northing[-1] + CELL / 2
+    corner = Affine(CELL, 0.0, west, 0.0, -CELL, north)
     rows, columns = terrain.heights.shape
     with rasterio.open(
-        FOLDER / "terrain.tif", "w", driver="GTiff", width=columns, height=rows, count=1,
+        folder / "terrain.tif", "w", driver="GTiff", width=columns, height=rows, count=1,
         dtype="float32", crs=CRS, transform=corner, compress="deflate", predictor=3, zlevel=9,
     ) as file:  # fmt: skip
         file.write(terrain.heights[::-1], 1)
@@ -243,9 +244,9 @@ def write_terrain(terrain: Terrain) -> None:
         file.set_band_description(1, "height of the ground above the geoid")
 
 
-def read_terrain() -> Terrain:
+def read_terrain(folder: Path = FOLDER) -> Terrain:
     """Return the delivered model as it stands in ``terrain.tif``."""
-    with rasterio.open(FOLDER / "terrain.tif") as file:
+    with rasterio.open(folder / "terrain.tif") as file:
         heights, corner = file.read(1)[::-1], file.transform
     rows, columns = heights.shape
     easting = corner.c + CELL * (np.arange(columns) + 0.5)
@@ -295,20 +296,20 @@ def truth(above_ground: Array) -> dict[str, Any]:
     }  # fmt: skip
 
 
-def main() -> None:
-    """Write every data file of this folder."""
-    write_terrain(make_terrain())
-    terrain = read_terrain()
+def main(folder: Path = FOLDER) -> None:
+    """Write every data file of the demo survey into a folder."""
+    write_terrain(folder, make_terrain())
+    terrain = read_terrain(folder)
     survey = fly_block(terrain)
     perfect, field = without_faults(survey.motion, terrain)
     drift, noise = faults(survey)
     above_ground = clearance(survey, terrain)
     altimeter = np.random.default_rng(SEEDS["altimeter"]).standard_normal(len(above_ground))
-    write_lines(survey, above_ground + ALTIMETER_SIGMA * altimeter, perfect + drift + noise)
+    write_lines(folder, survey, above_ground + ALTIMETER_SIGMA * altimeter, perfect + drift + noise)
     text = json.dumps(truth(above_ground), indent=2, ensure_ascii=False)
-    (FOLDER / "truth.json").write_text(text + "\n", encoding="utf-8")
+    (folder / "truth.json").write_text(text + "\n", encoding="utf-8")
     np.savez_compressed(
-        FOLDER / "truth_stations.npz",
+        folder / "truth_stations.npz",
         bodies=field["bodies"].astype(np.float32),
         terrain=field["terrain"].astype(np.float32),
         drift=drift.reshape(-1, 9).astype(np.float32),

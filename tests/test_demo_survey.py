@@ -5,10 +5,12 @@ import json
 from dataclasses import fields
 from functools import cache
 from io import BytesIO
+from pathlib import Path
 from typing import Final
 
 import numpy as np
 import pandas as pd
+import pytest
 from numpy.typing import NDArray
 
 from demo_survey import make_demo
@@ -154,3 +156,22 @@ def test_the_bodies_lie_under_the_ground_and_show_between_30_and_100_e() -> None
 
 def test_the_folder_is_small() -> None:
     assert sum(path.stat().st_size for path in make_demo.FOLDER.glob("*.*")) < 8_000_000
+
+
+def test_no_file_carries_the_hour_it_was_written() -> None:
+    # RFC 1952: byte 3 holds the flags (no name), bytes 4 to 7 the time
+    for name in make_demo.FLIGHTS:
+        head = (make_demo.FOLDER / f"lines_{name}.csv.gz").read_bytes()[:8]
+        assert head[3:8] == bytes(5)
+
+
+@pytest.mark.slow
+def test_made_twice_every_file_is_the_same_byte_for_byte(tmp_path: Path) -> None:
+    folders = [tmp_path / "one", tmp_path / "two"]
+    for folder in folders:
+        folder.mkdir()
+        make_demo.main(folder)
+    one, two = ({p.name: p.read_bytes() for p in folder.iterdir()} for folder in folders)
+    assert one == two
+    committed = {path.name for path in make_demo.FOLDER.iterdir() if path.is_file()}
+    assert committed - set(one) == {"README.md", "make_demo.py"}

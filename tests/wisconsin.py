@@ -18,7 +18,7 @@ import numpy as np
 import pandas as pd
 import rasterio
 from numpy.typing import NDArray
-from rasterio.transform import from_origin
+from rasterio import Affine
 
 from gradred import simulate
 from gradred.flight import Stations
@@ -154,7 +154,7 @@ def write(survey: Wisconsin, folder: Path) -> None:
 
 
 def _write_surface(path: Path, heights: Array, survey: Wisconsin) -> None:
-    corner = from_origin(survey.easting[0] - 100.0, survey.northing[-1] + 100.0, 200.0, 200.0)
+    corner = Affine(200.0, 0.0, survey.easting[0] - 100.0, 0.0, -200.0, survey.northing[-1] + 100.0)
     rows, columns = heights.shape
     with rasterio.open(
         path, "w", driver="GTiff", width=columns, height=rows, count=1, dtype="float32",
