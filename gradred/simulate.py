@@ -231,8 +231,8 @@ def read(motion: Motion, gradient: Array, self_gradient: Array | None = None) ->
 
     Source
     ------
-    Hofmann-Wellenhof and Moritz 2006, Physical Geodesy, 2nd edition, section 7: acceleration in a
-    rotating frame, differentiated; section number from memory.
+    Rummel, Yi and Stummer 2011, Journal of Geodesy 85, 777-790, for a gradiometer in orbit; the
+    equation is the derivative of the acceleration in turning axes.
 
     Checked by
     ----------
