@@ -13,7 +13,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, fields
-from typing import Final, Literal
+from typing import Final
 
 import numpy as np
 import xarray as xr
@@ -99,12 +99,12 @@ class Sheet:
 
 @dataclass(frozen=True)
 class Layer:
-    """Mass of one density between a surface and a level base.
+    """Mass of one density between a surface and a level base, a flat-topped column per cell.
 
     Parameters
     ----------
     heights : (n_northing, n_easting) array
-        Height of the surface at every cell centre, metres; rows along northing.
+        Height of the surface in every cell, metres; rows along northing.
     easting, northing : (n_easting,), (n_northing,) arrays
         Cell centres, metres, ascending.
     density : float
@@ -113,8 +113,6 @@ class Layer:
         Height of its lower side, metres, in the vertical reference of ``heights``.
     tolerance : float
         Largest error of its tensor, E; 0 sums every cell in closed form, at every station.
-    surface : str
-        "prism", one flat-topped column per cell, or "bilinear" between cell centres.
     """
 
     heights: Array
@@ -123,21 +121,14 @@ class Layer:
     density: float
     base: float
     tolerance: float = 0.001
-    surface: Literal["prism", "bilinear"] = "prism"
 
     def tensor(self, points: Array) -> Array:
         """Return (n, 6) E in the ``grid`` frame at (n, 3) points, metres."""
         model = (points, self.heights, self.easting, self.northing)
         if self.tolerance == 0.0:
-            return exact_terrain_tensor(
-                *model, density=self.density, base=self.base, surface=self.surface
-            )
+            return exact_terrain_tensor(*model, density=self.density, base=self.base)
         return terrain_tensor(
-            *model,
-            density=self.density,
-            base=self.base,
-            tolerance=self.tolerance,
-            surface=self.surface,
+            *model, density=self.density, base=self.base, tolerance=self.tolerance
         )
 
 
@@ -157,7 +148,7 @@ def grid_north(longitude: Array, latitude: Array, crs: str) -> Array:
     project = Transformer.from_crs("EPSG:4326", crs, always_xy=True).transform
     east_1, north_1 = project(longitude, latitude + 1e-4)
     east_0, north_0 = project(longitude, latitude - 1e-4)
-    return -np.degrees(np.arctan2(east_1 - east_0, north_1 - north_0))
+    return np.asarray(-np.degrees(np.arctan2(east_1 - east_0, north_1 - north_0)))
 
 
 def field(
@@ -246,7 +237,8 @@ def read(motion: Motion, gradient: Array, self_gradient: Array | None = None) ->
     rates = motion.rates
     square = np.einsum("ni,ni->n", rates, rates)[:, None, None] * np.eye(3)
     centrifugal = rates[:, :, None] * rates[:, None, :] - square
-    return to_matrix(there) - (centrifugal + cross_matrix(motion.acceleration)) / EOTVOS
+    turning = centrifugal + cross_matrix(motion.acceleration)
+    return np.asarray(to_matrix(there) - turning / EOTVOS)
 
 
 def cross_matrix(vector: Array) -> Array:

@@ -58,9 +58,10 @@ def test_the_bedrock_signal_is_that_of_its_relief_about_a_level() -> None:
     survey = made()
     level, few = survey.bedrock_height.mean(), slice(None, None, 100)
     east, north = np.meshgrid(survey.easting, survey.northing)
-    rock, east, north = survey.bedrock_height.ravel(), east.ravel(), north.ravel()
+    rock = survey.bedrock_height.ravel()
     low, high = np.minimum(rock, level), np.maximum(rock, level)
-    cells = np.stack([east - 100, east + 100, north - 100, north + 100, low, high], axis=1)
+    sides = [(axis + half).ravel() for axis in (east, north) for half in (-100.0, 100.0)]
+    cells = np.stack([*sides, low, high], axis=1)
     points = simulate.grid_points(survey.stations, wisconsin.CRS)[few]
     tensor = prism_tensor(points, cells, np.sign(rock - level) * wisconsin.CONTRAST)
     convergence = simulate.grid_north(
