@@ -182,7 +182,7 @@ def _proof(
     worst = float(error.max(initial=0.0))
     if worst > settings.tolerance:
         raise FitError(
-            f"the terrain sum is off by {worst:.3g} E, more than the {settings.tolerance:g} E asked",
+            f"the terrain sum is off by {worst:.3g} E, more than {settings.tolerance:g} E",
             where=f"stage remove_terrain, {len(chosen)} stations summed again with exact prisms",
             cure="ask for a smaller tolerance, and report this: it should not happen",
         )
