@@ -140,7 +140,7 @@ def read_delimited(
         raise ReadingsError(
             "the table has no rows of data", where=path.name, cure="deliver a file with readings"
         )
-    _check_last_row(path, body)
+    _check_last_row(path, body, dialect)
     return Delimited(path, columns, body, dialect)
 
 
@@ -230,6 +230,12 @@ def _fields(row: str, dialect: Dialect) -> list[str]:
 def _check_names(
     path: Path, names: Sequence[str], dialect: Dialect, wanted: Mapping[str, str]
 ) -> None:
+    if len(names) == 1 and len(wanted) > 1:
+        raise ReadingsError(
+            f"the header is one column for the delimiter {dialect.delimiter!r}: {names[0][:40]!r}",
+            where=f"{path.name}, row {max(dialect.header, 1)}",
+            cure="state the delimiter and the row of the header as they are in the file",
+        )
     faults = []
     for name, purpose in wanted.items():
         count = names.count(name)
@@ -352,20 +358,21 @@ def _width_fault(
     )
 
 
-def _check_last_row(path: Path, body: bytes) -> None:
+def _check_last_row(path: Path, body: bytes, dialect: Dialect) -> None:
     """Refuse a last row that breaks off inside its last number.
 
     Without a line end the last number may be cut short, which its value does not show; it shows
-    in fewer decimals than in the row before.
+    in decimals other than those of the row before.
     """
     if body.endswith(b"\n"):
         return
     rows = body.rsplit(b"\n", 2)[-2:]
-    decimals = [len(row.rpartition(b".")[2]) if b"." in row[-12:] else 0 for row in rows]
+    ends = [row.rpartition(dialect.delimiter.encode())[2].strip().decode() for row in rows]
+    decimals = [len(end.partition(".")[2]) for end in ends]
     if len(rows) == 2 and decimals[1] != decimals[0]:
         raise ReadingsError(
-            f"the last row ends without a line end, in {rows[1][-12:].decode('utf-8', 'replace')!r}"
-            ", which may be cut off",
+            f"the file ends without a line end in {ends[1]!r}, written unlike the {ends[0]!r} "
+            "in the row before: it may be cut off",
             where=f"{path.name}, last row",
             cure="copy the file again; if it is whole, add a line end",
         )
