@@ -30,9 +30,9 @@ def normal_sigma(normal: Array, attitude_sd: float, height_sd: float) -> Array:
     r"""Return what errors of attitude and height make of the normal field, ``enu`` frame.
 
     .. math:: σ_{xz} = δ\,|Γ_{zz} - Γ_{xx}|, \quad σ_{xy} = δ\,|Γ_{yy} - Γ_{xx}|, \quad
-        σ_{zz} = \sqrt{(2 δ^2 |Γ_{zz} - Γ_{yy}|)^2 + (0.00145 σ_h)^2}
+        σ_{zz}^2 = (2 δ^2 |Γ_{zz} - Γ_{yy}|)^2 + (2 δ Γ_{yz})^2 + (0.00145\,σ_h)^2
 
-    4.6 E per milliradian of tilt; a tilt enters the diagonal only by its square.
+    4.6 E per milliradian of tilt; a tilt enters the diagonal by its square and by the small yz.
 
     Parameters
     ----------
@@ -49,16 +49,16 @@ def normal_sigma(normal: Array, attitude_sd: float, height_sd: float) -> Array:
         E.
     """
     delta = np.radians(attitude_sd)
-    xx, _, _, yy, _, zz = normal.T
-    lift = 0.00145 * height_sd
-    second = 2.0 * delta**2
+    xx, _, _, yy, yz, zz = normal.T
+    lift, mixed = 0.00145 * height_sd, 2.0 * delta * np.abs(yz)
+    square = np.sqrt(2.0) * delta**2
     parts = (
-        np.hypot(second * np.abs(zz - xx), 0.5 * lift),
+        np.hypot(square * np.abs(zz - xx), 0.5 * lift),
         delta * np.abs(yy - xx),
         delta * np.abs(zz - xx),
-        np.hypot(second * np.abs(zz - yy), 0.5 * lift),
+        np.sqrt((square * (zz - yy)) ** 2 + mixed**2 + (0.5 * lift) ** 2),
         delta * np.abs(zz - yy),
-        np.hypot(second * np.abs(zz - yy), lift),
+        np.sqrt(2.0 * (square * (zz - yy)) ** 2 + mixed**2 + lift**2),
     )
     return np.stack(parts, axis=1)
 
