@@ -247,7 +247,9 @@ def _with_motion(data: xr.Dataset, readings: Readings, settings: LineSettings) -
     for name in ("height", *ATTITUDE, "clearance", "turbulence"):
         if name in readings.values:
             values = readings.values[name]
-            data = survey.put("lines", data, name, values % 360.0 if name == "heading" else values)
+            values = values % 360.0 if name == "heading" else values
+            data = survey.put("lines", data, name, values)
+    data["height"].attrs["separation"] = settings.separation or 0.0
     if settings.columns.delivers("rate_x"):
         rates = np.stack([readings.values[name] for name in RATES], axis=-1)
         data = survey.put("lines", data, "rates", rates, frame="body")
