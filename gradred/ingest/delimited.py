@@ -166,7 +166,7 @@ def _content(path: Path) -> bytes:
 def _decoded(path: Path, raw: bytes, dialect: Dialect) -> bytes:
     """Return a table's content as UTF-8 without mark, one kind of line end, blanks joined."""
     raw = raw.removeprefix(b"\xef\xbb\xbf")
-    if not raw.strip():
+    if not raw or raw.isspace():
         raise ReadingsError(
             "the file is empty", where=path.name, cure="deliver a file with readings"
         )
@@ -278,7 +278,7 @@ def _parse(
     # unwanted columns go by their place, so that equal names among them do no harm
     wanted = {*numbers, *texts}
     unique = [name if name in wanted else f"#{n}" for n, name in enumerate(names)]
-    if not body.strip():
+    if not body or body.isspace():
         return {name: pa.array([], pa.string()) for name in [*numbers, *texts]}
     table = pa.csv.read_csv(
         pa.BufferReader(body),

@@ -24,6 +24,21 @@ def tell(faults: Sequence[ReadingsError], about: str) -> None:
         raise ExceptionGroup(about, list(faults))
 
 
+def merged(faults: Iterable[ReadingsError]) -> list[ReadingsError]:
+    """Return the faults with those that say the same of several tables told once."""
+    places: dict[tuple[str, str], list[str]] = {}
+    for fault in faults:
+        places.setdefault((fault.what, fault.cure), []).append(fault.where)
+    return [
+        ReadingsError(
+            what,
+            where=where[0] if len(where) == 1 else f"{where[0]}, and {len(where) - 1} more like it",
+            cure=cure,
+        )
+        for (what, cure), where in places.items()
+    ]
+
+
 def nearest(word: str, known: Iterable[str]) -> str:
     """Return a cure for a misspelt name: the nearest of the known names, or all of them."""
     names = list(known)

@@ -135,6 +135,12 @@ def check_heights(lines: xr.Dataset, terrain: xr.Dataset, settings: HeightSettin
     Stations outside the model are flagged. What was compared stands in the attributes of
     ``terrain_height``.
     """
+    if lines.attrs["crs"] != terrain.attrs["crs"]:
+        raise ReadingsError(
+            f"the lines are in {lines.attrs['crs']}, the terrain model in {terrain.attrs['crs']}",
+            where="stage check_heights",
+            cure="state one 'crs' at the top of the pipeline file, for both",
+        )
     ground = terrain_below(lines, terrain)
     there = np.isfinite(lines["easting"].to_numpy()) & np.isfinite(lines["northing"].to_numpy())
     outside = there & np.isnan(ground)

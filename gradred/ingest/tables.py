@@ -18,7 +18,7 @@ from gradred.errors import ReadingsError
 from gradred.ingest.checks import missing_faults, name_faults, order_faults, value_faults
 from gradred.ingest.columns import DIAGONAL, GROUPS, NINE, LineColumns, LineUnits
 from gradred.ingest.delimited import Delimited, Dialect, read_delimited
-from gradred.ingest.faults import tell
+from gradred.ingest.faults import merged, tell
 from gradred.ingest.kinds import line_kinds
 from gradred.ingest.positions import place
 from gradred.ingest.readings import Readings, Texts, Times
@@ -183,7 +183,7 @@ def _read(settings: LineSettings) -> Readings:
             faults.append(error)
         except ExceptionGroup as group:
             faults.extend(error for error in group.exceptions if isinstance(error, ReadingsError))
-    tell(faults, "the tables cannot be read")
+    tell(merged(faults), "the tables cannot be read")
     return _joined(tables, np.concatenate(when), settings)
 
 

@@ -123,6 +123,16 @@ def test_lines_outside_the_terrain_model(tmp_path: Path) -> None:
     )
 
 
+def test_lines_and_terrain_on_two_maps(tmp_path: Path) -> None:
+    terrain = terrain_part(tmp_path)
+    lines = lines_over(terrain)
+    assert "\n".join(refusal(lines, terrain.assign_attrs(crs="EPSG:32632"))) == message(
+        "the lines are in EPSG:32633, the terrain model in EPSG:32632",
+        "stage check_heights",
+        "state one 'crs' at the top of the pipeline file, for both",
+    )
+
+
 def test_terrain_in_feet_declared_as_metres(tmp_path: Path) -> None:
     lines = lines_over(terrain_part(tmp_path))
     feet = terrain_part(tmp_path, 1.0 / 0.3048)

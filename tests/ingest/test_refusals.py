@@ -63,6 +63,17 @@ def test_several_faults_of_several_tables_are_told_together(tmp_path: Path) -> N
     ]
 
 
+def test_the_same_fault_of_many_tables_is_told_once(tmp_path: Path) -> None:
+    tables = [table(tmp_path, GOOD.replace("hdg", "hdgs"), f"{name}.csv") for name in "abc"]
+    with pytest.raises(ReadingsError) as caught:
+        read_lines(settings(*tables))
+    assert str(caught.value) == message(
+        "there is no column 'hdg', wanted for heading",
+        "a.csv, row 1, and 2 more like it",
+        "did you mean 'hdgs'?",
+    )
+
+
 def test_duplicated_times(tmp_path: Path) -> None:
     assert refusal(GOOD.replace("08:00:01", "08:00:00"), tmp_path) == message(
         "line L10 has the time 2031-03-05T08:00:00 twice",
