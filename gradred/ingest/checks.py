@@ -66,6 +66,27 @@ def name_faults(readings: Readings) -> list[ReadingsError]:
     return faults
 
 
+def flight_faults(readings: Readings) -> list[ReadingsError]:
+    """Return a fault if one name of a line stands for pieces of several flights."""
+    names, code = runs(readings.line)
+    flights, flight = runs(readings.flight)
+    pairs = np.unique(code * len(flights) + flight)
+    twice = np.flatnonzero(np.bincount(pairs // len(flights)) > 1)
+    if not len(twice):
+        return []
+    line = int(twice[0])
+    flown = [str(flights[pair % len(flights)]) for pair in pairs if pair // len(flights) == line]
+    last = np.flatnonzero((code == line) & (readings.flight == flown[-1]))
+    more = f", and {number_of(len(twice) - 1, 'more line')} like it" if len(twice) > 1 else ""
+    return [
+        ReadingsError(
+            f"line {names[line]} was flown in the flights {' and '.join(flown)}{more}",
+            where=readings.where(int(last[0])),
+            cure="give each piece a name of its own: drift is estimated line by line",
+        )
+    ]
+
+
 def order_faults(readings: Readings) -> list[ReadingsError]:
     """Return a fault per flight line whose times do not go on from reading to reading."""
     _, code = runs(readings.line)

@@ -2,19 +2,23 @@
 
 from __future__ import annotations
 
+import warnings
+from collections.abc import Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, Final
 
+import h5py
 import numpy as np
 import rasterio
 import xarray as xr
 from numpy.typing import NDArray
 from pyproj import CRS
 from pyproj.exceptions import CRSError
-from rasterio.errors import RasterioError
+from rasterio.errors import NotGeoreferencedWarning, RasterioError
 
-from gradred.errors import ReadingsError
+from gradred.errors import GradredError, ReadingsError
 from gradred.ingest.faults import nearest
 
 Array = NDArray[np.float64]
@@ -89,28 +93,32 @@ def read_raster(path: Path, variable: str | None, band: int | None, nodata: floa
         raster = _geotiff(path, band)
     if nodata is not None:
         raster.heights[raster.heights == nodata] = np.nan
-    if min(raster.heights.shape) < 2:
+    return raster
+
+
+def _check_size(path: Path, columns: int, rows: int) -> None:
+    if min(columns, rows) < 2:
         raise ReadingsError(
-            f"the raster has {len(raster.x)} × {len(raster.y)} cells",
+            f"the raster has {columns} × {rows} cells",
             where=path.name,
             cure="deliver a terrain model",
         )
-    return raster
 
 
 def _geotiff(path: Path, band: int | None) -> Raster:
     try:
-        with rasterio.open(path, driver="GTiff") as file:
+        with _unwarned(), rasterio.open(path, driver="GTiff") as file:
             _check_transform(path, file.transform)
+            _check_size(path, file.width, file.height)
             number = _band(path, file.count, band)
             values = file.read(number, masked=True).astype(np.float64)
             scale, offset = file.scales[number - 1], file.offsets[number - 1]
             heights = np.ma.filled(values, np.nan) * scale + offset
             crs = CRS.from_wkt(file.crs.to_wkt()) if file.crs else None
             t, unit = file.transform, _unit(file.units[number - 1])
-    except (RasterioError, CRSError) as error:
+    except (RasterioError, CRSError, UnicodeDecodeError) as error:
         raise ReadingsError(
-            f"is not a GeoTIFF that can be read: {str(error).splitlines()[0]}",
+            f"is not a GeoTIFF that can be read: {(str(error).splitlines() or ['?'])[0]}",
             where=path.name,
             cure="deliver the terrain model as GeoTIFF or NetCDF",
         ) from None
@@ -120,6 +128,14 @@ def _geotiff(path: Path, band: int | None) -> Raster:
     if t.e < 0.0:
         y, heights = y[::-1], heights[::-1]
     return Raster(np.ascontiguousarray(heights), x, np.ascontiguousarray(y), _horizontal(crs), unit)
+
+
+@contextmanager
+def _unwarned() -> Iterator[None]:
+    """Keep quiet about a raster without a place: it is refused in gradred's own words."""
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", NotGeoreferencedWarning)
+        yield
 
 
 def _check_transform(path: Path, transform: Any) -> None:
@@ -160,25 +176,46 @@ def _horizontal(crs: CRS | None) -> CRS | None:
 
 
 def _netcdf(path: Path, variable: str | None, engine: Any) -> Raster:
-    try:
-        with xr.open_dataset(path, engine=engine, decode_timedelta=False) as stored:
-            data = _variable(path, stored, variable).load()
-            crs = _netcdf_crs(stored, data)
-    except (OSError, ValueError, CRSError) as error:
-        raise ReadingsError(
-            f"is not a NetCDF file that can be read: {str(error).splitlines()[0]}",
-            where=path.name,
-            cure="deliver the terrain model as GeoTIFF or NetCDF",
-        ) from None
+    data, crs = _loaded(path, variable, engine)
     x_name, y_name = _axis(path, data, _X_NAMES, "X"), _axis(path, data, _Y_NAMES, "Y")
+    _check_size(path, data.sizes[x_name], data.sizes[y_name])
     data = data.transpose(y_name, x_name).sortby([y_name, x_name])
     x, y = (data[name].to_numpy().astype(np.float64) for name in (x_name, y_name))
     for name, centres in ((x_name, x), (y_name, y)):
         _check_even(path, name, centres)
-    if data[x_name].attrs.get("units", "").startswith("degree") and x.mean() > 180.0:
+    if str(data[x_name].attrs.get("units", "")).startswith("degree") and x.mean() > 180.0:
         x = x - 360.0
     heights = np.array(data.to_numpy(), dtype=np.float64)
     return Raster(heights, x, y, _horizontal(crs), _unit(data.attrs.get("units")))
+
+
+def _loaded(path: Path, variable: str | None, engine: Any) -> tuple[xr.DataArray, CRS | None]:
+    """Return the grid and its CRS from a NetCDF file."""
+    try:
+        if engine == "h5netcdf":
+            # of a broken file h5py lets go cleanly, and h5netcdf does not
+            with h5py.File(path, "r") as raw:
+                raw.visititems(_touch)
+        with xr.open_dataset(path, engine=engine, decode_timedelta=False) as stored:
+            data = _variable(path, stored, variable).load()
+            if data.dtype.kind not in "fiu":
+                raise ValueError(f"{variable} holds no numbers")
+            return data, _netcdf_crs(stored, data)
+    except GradredError:
+        raise
+    except Exception as error:
+        # a broken file makes the libraries below raise KeyError, IndexError, RuntimeError, ...
+        raise ReadingsError(
+            f"is not a NetCDF file that can be read: {(str(error).splitlines() or ['?'])[0]}",
+            where=path.name,
+            cure="deliver the terrain model as GeoTIFF or NetCDF",
+        ) from None
+
+
+def _touch(name: str, item: Any) -> None:
+    """Read all that belongs to one object of an HDF5 file."""
+    for _ in item.attrs.items():
+        pass
 
 
 def _variable(path: Path, stored: xr.Dataset, variable: str | None) -> xr.DataArray:

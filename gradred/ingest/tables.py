@@ -15,7 +15,13 @@ from pydantic import Field, model_validator
 
 from gradred import survey
 from gradred.errors import ReadingsError
-from gradred.ingest.checks import missing_faults, name_faults, order_faults, value_faults
+from gradred.ingest.checks import (
+    flight_faults,
+    missing_faults,
+    name_faults,
+    order_faults,
+    value_faults,
+)
 from gradred.ingest.columns import DIAGONAL, GROUPS, NINE, LineColumns, LineUnits
 from gradred.ingest.delimited import Delimited, Dialect, read_delimited
 from gradred.ingest.faults import merged, tell
@@ -154,6 +160,7 @@ def read_lines(settings: LineSettings) -> xr.Dataset:
             *value_faults(readings),
             *missing_faults(readings),
             *order_faults(readings),
+            *(flight_faults(readings) if settings.columns.delivers("flight") else ()),
             *kind_faults,
         ],
         "the readings cannot be vouched for",

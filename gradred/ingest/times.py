@@ -53,12 +53,27 @@ def times(
     ahead_of_utc : float
         What the delivered times are ahead of UTC, s; subtracted.
     """
+    if ahead_of_utc and columns.time is not None:
+        _check_zone(table, columns.time, ahead_of_utc)
     try:
         found = _delivered(table, columns, date_format)
     except _UnreadableError as error:
         raise _refusal(table, error) from None
     shift = np.rint(ahead_of_utc * 1e9).astype("timedelta64[ns]")
     return np.asarray(found - shift)
+
+
+def _check_zone(table: Delimited, column: str, ahead_of_utc: float) -> None:
+    """Refuse times that say that they are UTC, and are stated not to be."""
+    said = pc.fill_null(pc.ends_with(table.columns[column], "Z"), False)
+    if pc.any(said).as_py():
+        index = pc.index(said, True).as_py()
+        raise ReadingsError(
+            f"column {column!r} holds {table.columns[column][index].as_py()!r}, whose Z says UTC, "
+            f"but 'ahead_of_utc' is {ahead_of_utc:g} s",
+            where=f"{table.path.name}, row {table.row(index)}",
+            cure="leave out 'ahead_of_utc', or correct the column",
+        )
 
 
 def _delivered(table: Delimited, columns: LineColumns, date_format: DateFormat) -> Times:

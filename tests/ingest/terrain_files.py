@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import warnings
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 import rasterio
 from numpy.typing import NDArray
+from rasterio.errors import NotGeoreferencedWarning
 from rasterio.transform import Affine
 
 from gradred.ingest.rasters import TerrainFileSettings
@@ -33,13 +35,22 @@ def geotiff(
     rows, columns = heights.shape
     place = transform or Affine(cell, 0.0, west, 0.0, -cell, north)
     stated = {"dtype": "float64", "count": 1, **profile}
-    with rasterio.open(
-        path, "w", driver="GTiff", width=columns, height=rows, crs=crs, transform=place, **stated
-    ) as file:
-        for band in range(1, stated["count"] + 1):
-            file.write(heights[::-1].astype(stated["dtype"]), band)
-        if unit is not None:
-            file.set_band_unit(1, unit)
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", NotGeoreferencedWarning)
+        with rasterio.open(
+            path,
+            "w",
+            driver="GTiff",
+            width=columns,
+            height=rows,
+            crs=crs,
+            transform=place,
+            **stated,
+        ) as file:
+            for band in range(1, stated["count"] + 1):
+                file.write(heights[::-1].astype(stated["dtype"]), band)
+            if unit is not None:
+                file.set_band_unit(1, unit)
     return path
 
 

@@ -1,5 +1,6 @@
 """Terrain models: heights arrive as they are, or are turned, filled or refused as stated."""
 
+import tempfile
 from pathlib import Path
 from typing import Any
 
@@ -7,8 +8,12 @@ import numpy as np
 import pyproj
 import pytest
 import xarray as xr
+from hypothesis import given
+from hypothesis import settings as budget
+from hypothesis import strategies as st
 from rasterio.transform import Affine
 
+from gradred import survey
 from gradred.errors import ReadingsError
 from gradred.ingest.positions import between_maps
 from gradred.ingest.rasters import read_terrain
@@ -161,6 +166,12 @@ def test_missing_cells_are_refused_filled_or_kept(tmp_path: Path) -> None:
             "deliver a raster with rows along easting or longitude, georeferenced",
         ),
         (
+            {"transform": Affine.identity()},
+            "the raster does not tell where it lies",
+            "t.tif, transform (1.0, 0.0, 0.0, 0.0, 1.0, 0.0)",
+            "deliver a raster with rows along easting or longitude, georeferenced",
+        ),
+        (
             {"crs": None, "west": 15.0, "north": 47.0, "cell": 0.001},
             "the file does not tell its CRS, and its coordinates look like degrees",
             "t.tif",
@@ -174,7 +185,7 @@ def test_missing_cells_are_refused_filled_or_kept(tmp_path: Path) -> None:
             "state which one holds the heights in 'band'",
         ),
     ],
-    ids=["rotated", "mirrored", "degrees", "no CRS", "bands"],
+    ids=["rotated", "mirrored", "no place", "degrees", "no CRS", "bands"],
 )
 def test_rasters_that_are_no_terrain_model(
     tmp_path: Path, profile: dict[str, Any], what: str, where: str, cure: str
@@ -204,6 +215,30 @@ def test_files_that_are_no_raster(tmp_path: Path, content: bytes) -> None:
     told = refusal(tmp_path / "t.tif", variable="height")
     assert told.startswith(f"ReadingsError: is not a {kind} that can be read: ")
     assert told.endswith("  cure:  deliver the terrain model as GeoTIFF or NetCDF")
+
+
+@given(
+    st.sampled_from(["t.tif", "t.nc"]),
+    st.lists(st.tuples(st.integers(0, 800), st.integers(0, 255)), min_size=1, max_size=5),
+    st.integers(0, 20_000),
+)
+@budget(deadline=None, max_examples=30)
+def test_a_damaged_file_is_read_or_refused(
+    name: str, changes: list[tuple[int, int]], cut: int
+) -> None:
+    with tempfile.TemporaryDirectory() as folder:
+        path = Path(folder) / name
+        write = geotiff(path, hills(), compress="deflate") if name == "t.tif" else netcdf(path)
+        content = bytearray(write.read_bytes())
+        for place, value in changes:
+            content[place] = value
+        path.write_bytes(content[: len(content) - cut])
+        try:
+            terrain = [read_terrain(settings(path, variable="z", fill="keep"))]
+        except ReadingsError:
+            terrain = []
+        for part in terrain:
+            survey.check("terrain", part, ("height",), where="fuzz")
 
 
 def test_bedrock_on_the_grid_of_the_surface(tmp_path: Path) -> None:

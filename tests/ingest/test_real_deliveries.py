@@ -58,12 +58,13 @@ def test_a_real_fixed_wing_line(tmp_path: Path) -> None:
     # degrees, which is 9 and 11 mm: half of it each, and half a centimetre of the printed metres
     assert lines["easting"].to_numpy()[0] == pytest.approx(636_724.27, abs=0.011)
     assert lines["northing"].to_numpy()[0] == pytest.approx(3_748_996.47, abs=0.011)
-    # flown at 60 to 70 m/s along its bearing of 110 degrees
+    # flown at 60 to 70 m/s along its published bearing of 110 degrees true, printed to 0.01: grid
+    # north lies 0.82 degrees east of true north, so that an azimuth on the map is 0.82 degrees less
     east, north = np.diff(lines["easting"]), np.diff(lines["northing"])
     assert np.hypot(east, north).mean() == pytest.approx(65.0, abs=10.0)
     true_course = np.degrees(np.arctan2(east, north)) + lines["convergence"].to_numpy()[:-1]
     difference = true_course - lines["heading"].to_numpy()[:-1]
-    assert abs(float(np.median(difference))) < 2.0
+    assert abs(float(np.median(difference))) < 0.2
     table = np.genfromtxt(FIXED_WING, delimiter=",", skip_header=1, names=True)
     ground = compare_heights(
         (lines["height"] - lines["clearance"]).to_numpy() + 28.0, table["dtm_ortho_m"]

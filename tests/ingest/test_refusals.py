@@ -205,6 +205,23 @@ def test_a_name_that_is_missing(tmp_path: Path) -> None:
     )
 
 
+def test_a_line_of_two_flights(tmp_path: Path) -> None:
+    text = GOOD.replace("F1,L10,2031-03-05T08:00:02.5", "F2,L10,2031-03-05T09:00:00")
+    assert refusal(text, tmp_path) == message(
+        "line L10 was flown in the flights F1 and F2",
+        "lines.csv, row 4 (line L10, 2031-03-05T09:00:00)",
+        "give each piece a name of its own: drift is estimated line by line",
+    )
+
+
+def test_times_that_say_utc_and_are_stated_not_to_be(tmp_path: Path) -> None:
+    assert refusal(GOOD.replace(":01,", ":01Z,"), tmp_path, ahead_of_utc=18.0) == message(
+        "column 'time' holds '2031-03-05T08:00:01Z', whose Z says UTC, but 'ahead_of_utc' is 18 s",
+        "lines.csv, row 3",
+        "leave out 'ahead_of_utc', or correct the column",
+    )
+
+
 def test_a_kind_that_is_none_and_a_pattern_that_fits_no_line(tmp_path: Path) -> None:
     stated: dict[str, Any] = {"columns": columns(flight=None, kind="flight"), "ties": None}
     assert refusal(GOOD.replace("F1", "tei"), tmp_path, **stated) == message(
