@@ -8,7 +8,7 @@ from typing import Final
 import numpy as np
 from numpy.typing import NDArray
 from pyproj import CRS, Proj, Transformer
-from pyproj.exceptions import CRSError
+from pyproj.exceptions import CRSError, ProjError
 
 from gradred.errors import ReadingsError
 from gradred.ingest.readings import Readings
@@ -18,6 +18,38 @@ Array = NDArray[np.float64]
 GEOGRAPHIC: Final = "EPSG:4326"
 _SCALE_LIMIT: Final = 0.01
 """A map whose scale is further from 1 was not made for the area: distances would be 1 % wrong."""
+
+
+def known_crs(code: str, *, where: str) -> CRS:
+    """Return the CRS of an EPSG code; refuse a code that there is not."""
+    try:
+        return CRS(code)
+    except CRSError:
+        raise ReadingsError(
+            f"there is no {code}", where=where, cure="look the code up in the EPSG register"
+        ) from None
+
+
+def between(source: CRS, target: CRS) -> Transformer:
+    """Return the change of (longitude or easting, latitude or northing) from one CRS to another.
+
+    Datums that are joined only by taking them for equal, which is up to hundreds of metres wrong,
+    are refused.
+    """
+    try:
+        return Transformer.from_crs(source, target, always_xy=True, allow_ballpark=False)
+    except ProjError:
+        raise ReadingsError(
+            f"no change of datum is known from {told_crs(source)} to {told_crs(target)}",
+            where="positions",
+            cure="deliver positions or the terrain model in a CRS of the survey's datum",
+        ) from None
+
+
+def told_crs(crs: CRS) -> str:
+    """Return code and name of a CRS for a message."""
+    code = crs.to_epsg()
+    return crs.name if code is None else f"EPSG:{code} ({crs.name})"
 
 
 def projected_crs(code: str, *, where: str) -> CRS:
@@ -30,14 +62,7 @@ def projected_crs(code: str, *, where: str) -> CRS:
     where : str
         The setting that names it.
     """
-    try:
-        crs = CRS(code)
-    except CRSError:
-        raise ReadingsError(
-            f"there is no {code}",
-            where=where,
-            cure="look the code up in the EPSG register",
-        ) from None
+    crs = known_crs(code, where=where)
     axes = [(axis.direction, axis.unit_name) for axis in crs.axis_info[:2]]
     if not crs.is_projected or sorted(axes) != [("east", "metre"), ("north", "metre")]:
         told = ", ".join(f"{direction} in {unit}" for direction, unit in axes)
@@ -51,19 +76,19 @@ def projected_crs(code: str, *, where: str) -> CRS:
 
 def to_map(longitude: Array, latitude: Array, crs: CRS) -> tuple[Array, Array]:
     """Return (n,) easting and northing, metres, of (n,) geodetic WGS 84 positions, degrees."""
-    return _through(Transformer.from_crs(GEOGRAPHIC, crs, always_xy=True), longitude, latitude)
+    return _through(between(CRS(GEOGRAPHIC), crs), longitude, latitude)
 
 
 def to_geographic(easting: Array, northing: Array, crs: CRS) -> tuple[Array, Array]:
     """Return (n,) geodetic WGS 84 longitude and latitude, degrees, of (n,) map positions, m."""
-    return _through(Transformer.from_crs(crs, GEOGRAPHIC, always_xy=True), easting, northing)
+    return _through(between(crs, CRS(GEOGRAPHIC)), easting, northing)
 
 
 def between_maps(easting: Array, northing: Array, source: CRS, target: CRS) -> tuple[Array, Array]:
     """Return (n,) easting and northing in another CRS, metres; unchanged where it is the same."""
     if source == target:
         return easting, northing
-    return _through(Transformer.from_crs(source, target, always_xy=True), easting, northing)
+    return _through(between(source, target), easting, northing)
 
 
 def _through(transformer: Transformer, x: Array, y: Array) -> tuple[Array, Array]:
@@ -180,10 +205,6 @@ def place(readings: Readings, code: str, position_code: str | None, tolerance: f
     return Placed(longitude, latitude, easting, northing, factors.convergence)
 
 
-def _name(crs: CRS) -> str:
-    return f"{crs.to_string()} ({crs.name})"
-
-
 def _compare(
     readings: Readings, longitude: Array, latitude: Array, crs: CRS, tolerance: float
 ) -> None:
@@ -195,7 +216,7 @@ def _compare(
     worst = int(np.nanargmax(gap))
     count = int(np.count_nonzero(gap > tolerance))
     raise ReadingsError(
-        f"easting and northing in {_name(crs)} are up to {gap[worst]:.1f} m from longitude and "
+        f"easting and northing in {told_crs(crs)} are up to {gap[worst]:.1f} m from longitude and "
         f"latitude, more than {tolerance:g} m at {count} of {readings.size} readings",
         where=readings.where(worst),
         cure="state the CRS of the delivered easting and northing in 'position_crs'; "
@@ -211,7 +232,7 @@ def _check_found(readings: Readings, longitude: Array, crs: CRS) -> None:
         easting, northing = (readings.values[name][first] for name in ("easting", "northing"))
         raise ReadingsError(
             f"there is no place on Earth at easting {easting:g}, northing {northing:g} of "
-            f"{_name(crs)}",
+            f"{told_crs(crs)}",
             where=readings.where(first),
             cure="state the CRS of the delivered easting and northing in 'position_crs'",
         )
@@ -228,7 +249,7 @@ def _check_area(
         scale = factors.meridional_scale[first], factors.parallel_scale[first]
         raise ReadingsError(
             f"at longitude {longitude[first]:.5f}, latitude {latitude[first]:.5f} the map "
-            f"{_name(crs)} has the scales {scale[0]:.4f} and {scale[1]:.4f}",
+            f"{told_crs(crs)} has the scales {scale[0]:.4f} and {scale[1]:.4f}",
             where=readings.where(first),
             cure="name a CRS made for the area, with a scale within 1 % of 1, as the UTM zone",
         )

@@ -6,7 +6,15 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from pyproj import CRS, Geod
 
-from gradred.ingest.positions import between_maps, fits_area, map_factors, to_geographic, to_map
+from gradred.errors import ReadingsError
+from gradred.ingest.positions import (
+    between,
+    between_maps,
+    fits_area,
+    map_factors,
+    to_geographic,
+    to_map,
+)
 
 UTM33 = CRS("EPSG:32633")
 
@@ -68,3 +76,16 @@ def test_the_same_map_is_passed_through_bit_by_bit() -> None:
     back = between_maps(*moved, CRS("EPSG:32632"), UTM33)
     # PROJ's series are good to 1e-8 m within 10 degrees of the meridian; two of them
     np.testing.assert_allclose(back, [easting, northing], atol=1e-6)
+
+
+def test_datums_that_nothing_joins_are_refused() -> None:
+    # the Moon (IAU 2015) and the Earth
+    moon = CRS.from_proj4("+proj=longlat +R=1737400 +no_defs")
+    with pytest.raises(ReadingsError) as caught:
+        between(moon, UTM33)
+    assert str(caught.value) == (
+        "ReadingsError: no change of datum is known from unknown to "
+        "EPSG:32633 (WGS 84 / UTM zone 33N)\n"
+        "  where: positions\n"
+        "  cure:  deliver positions or the terrain model in a CRS of the survey's datum"
+    )

@@ -113,6 +113,38 @@ def test_coarser_cells_keep_the_mean(tmp_path: Path) -> None:
     np.testing.assert_allclose(coarse, expected, rtol=1e-14)
 
 
+def test_finer_cells_lie_on_the_surface_between_centres(tmp_path: Path) -> None:
+    path = geotiff(tmp_path / "t.tif", hills())
+    extent = [500_050.0, 5_207_050.0, 500_250.0, 5_207_150.0]
+    fine = read_terrain(settings(path, cell=50.0, extent=extent))["height"].to_numpy()
+    h = hills()[:2, :2]
+    # a quarter of the way from the first centre, in both directions: weights 9, 3, 3 and 1 of 16
+    expected = (9.0 * h[0, 0] + 3.0 * h[0, 1] + 3.0 * h[1, 0] + h[1, 1]) / 16.0
+    assert fine.shape == (2, 4)
+    assert fine[0, 0] == pytest.approx(expected, rel=1e-14)
+
+
+def test_an_extent_between_two_cells_is_refused(tmp_path: Path) -> None:
+    path = geotiff(tmp_path / "t.tif", hills())
+    assert refusal(path, extent=[500_100.0, 5_207_100.0, 500_200.0, 5_208_000.0]) == message(
+        "the terrain model has 1 × 9 cells of 100 m",
+        "t.tif, stage read_terrain",
+        "state a larger extent, or a smaller cell",
+    )
+
+
+def test_a_raster_crs_that_there_is_not(tmp_path: Path) -> None:
+    path = geotiff(tmp_path / "t.tif", hills(), crs=None)
+    assert refusal(path, raster_crs="EPSG:99999") == message(
+        "there is no EPSG:99999",
+        "stage read_terrain, raster_crs",
+        "look the code up in the EPSG register",
+    )
+    expected = read_terrain(settings(geotiff(tmp_path / "t.tif", hills())))
+    stated = geotiff(tmp_path / "t.tif", hills(), crs=None)
+    xr.testing.assert_equal(read_terrain(settings(stated, raster_crs="EPSG:32633")), expected)
+
+
 def test_degrees_are_turned_to_metres(tmp_path: Path) -> None:
     heights = np.full((40, 40), 123.0)
     path = geotiff(tmp_path / "t.tif", heights, west=15.0, north=47.0, cell=0.001, crs="EPSG:4326")
