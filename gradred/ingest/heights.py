@@ -52,13 +52,14 @@ class HeightSettings(Settings):
 
 @dataclass(frozen=True)
 class Comparison:
-    """Ground measured from the air against a terrain model: offset, spread, misfit m, slope 1."""
+    """Ground measured from the air against a terrain model, metres; slope and ratio bare."""
 
     stations: int
     offset: float
     spread: float
     slope: float
     misfit: float
+    ratio: float
 
 
 def compare_heights(measured: Array, model: Array) -> Comparison:
@@ -70,7 +71,8 @@ def compare_heights(measured: Array, model: Array) -> Comparison:
     and the slope b of h − c = a + b t by least squares, without the stations whose misfit to it
     is over four times the robust spread of the misfits. A slope near 0.3048 or 3.2808 tells feet
     taken for metres, or metres for feet; a steady offset tells a geoid separation left out or
-    added twice.
+    added twice. Over ground too flat for a slope the ratio of the medians of h − c and t tells
+    feet.
 
     Parameters
     ----------
@@ -90,8 +92,8 @@ def compare_heights(measured: Array, model: Array) -> Comparison:
 
     Source
     ------
-    Huber, P. J. (1981), Robust Statistics, Wiley, chapter 5 for the median deviation; the rest is
-    common practice, no source.
+    Huber, P. J. (1981), Robust Statistics, Wiley, chapter 5 (from memory) for the median deviation;
+    the rest is common practice, no source.
 
     Checked by
     ----------
@@ -100,7 +102,9 @@ def compare_heights(measured: Array, model: Array) -> Comparison:
     difference = measured - model
     offset = float(np.median(difference))
     slope, misfit = _slope(measured, model)
-    return Comparison(len(model), offset, _robust_spread(difference), slope, misfit)
+    level = float(np.median(model))
+    ratio = float(np.median(measured)) / level if level else float("nan")
+    return Comparison(len(model), offset, _robust_spread(difference), slope, misfit, ratio)
 
 
 def _robust_spread(values: Array) -> float:
@@ -187,18 +191,20 @@ def _judge(
 ) -> None:
     """Refuse heights that do not belong to one another, naming the likely cause."""
     where = f"stage check_heights, {number_of(found.stations, 'station')} with a clearance"
-    if (feet := _feet(found)) is not None:
+    feet = _feet(found.slope)
+    if feet is not None and found.misfit < 0.5 * found.spread:
         raise ReadingsError(
             f"(height - clearance) rises by {found.slope:.4f} m per metre of the terrain model",
             where=where,
             cure=feet,
         )
     if abs(found.offset) > limits.offset_limit:
+        flat = _feet(found.ratio) if np.isnan(found.slope) else None
         raise ReadingsError(
             f"(height - clearance) is {found.offset:+.2f} m from the terrain model in the median, "
             f"with a spread of {found.spread:.2f} m; the limit is {limits.offset_limit:g} m",
             where=where,
-            cure=_datum(found.offset, lines, terrain),
+            cure=flat or _datum(found.offset, lines, terrain),
         )
     if found.spread > limits.spread_limit:
         raise ReadingsError(
@@ -210,16 +216,14 @@ def _judge(
         )
 
 
-def _feet(found: Comparison) -> str | None:
-    """Return the cure where a slope tells that one of the two is in feet, taken for metres."""
-    if not found.misfit < 0.5 * found.spread:
-        return None
-    if abs(found.slope / _FOOT - 1.0) < 0.1:
+def _feet(rise: float) -> str | None:
+    """Return the cure where heights rise, or stand, as if one of the two were in feet."""
+    if abs(rise / _FOOT - 1.0) < 0.1:
         return (
             "1 ft = 0.3048 m: the terrain model is likely in feet (read_terrain, unit), "
             "or the heights of the lines are metres taken for feet"
         )
-    if abs(found.slope * _FOOT - 1.0) < 0.1:
+    if abs(rise * _FOOT - 1.0) < 0.1:
         return (
             "1 m = 3.2808 ft: the heights of the lines are likely in feet (read_lines, units), "
             "or those of the terrain model are metres taken for feet"

@@ -97,6 +97,16 @@ def test_planted_offsets_and_slopes_come_back(offset: float, slope: float, seed:
     assert shifted.spread == pytest.approx(found.spread, abs=1e-9)
 
 
+def test_the_parts_are_saved_and_opened_unchanged(tmp_path: Path) -> None:
+    terrain = terrain_part(tmp_path)
+    lines = check_heights(lines_over(terrain), terrain, LIMITS)
+    for part, data in (("lines", lines), ("terrain", terrain)):
+        survey.save(part, data, tmp_path / "part.nc")
+        name, again = survey.open_part(tmp_path / "part.nc")
+        assert name == part
+        xr.testing.assert_identical(again, data)
+
+
 def test_stations_outside_the_model_are_flagged_and_counted(tmp_path: Path) -> None:
     terrain = terrain_part(tmp_path)
     lines = lines_over(terrain)
@@ -154,6 +164,15 @@ def test_metres_declared_as_feet(tmp_path: Path) -> None:
         "  cure:  1 m = 3.2808 ft: the heights of the lines are likely in feet "
         "(read_lines, units), or those of the terrain model are metres taken for feet"
     )
+
+
+def test_feet_over_ground_too_flat_for_a_slope(tmp_path: Path) -> None:
+    terrain = terrain_part(tmp_path)
+    flat = terrain.assign(height=terrain["height"].copy(data=300.0 + 0.01 * hills()))
+    feet = terrain.assign(height=terrain["height"].copy(data=flat["height"].to_numpy() / 0.3048))
+    told = refusal(lines_over(flat), feet)
+    assert told[0].startswith("ReadingsError: (height - clearance) is -69")
+    assert told[2].startswith("  cure:  1 ft = 0.3048 m: the terrain model is likely in feet")
 
 
 def test_a_separation_left_out(tmp_path: Path) -> None:
