@@ -140,7 +140,8 @@ def remove_terrain(lines: xr.Dataset, terrain: xr.Dataset, settings: TerrainSett
         + settings.tolerance**2 / 9.0
     )
     out = survey.flag(lines, "outside_terrain_model", whole & ~_covered(terrain, points, settings))
-    out = survey.put("lines", out, "terrain_height", ground)
+    if "terrain_height" not in out:  # check_heights has told more about it
+        out = survey.put("lines", out, "terrain_height", ground)
     return survey.subtract(
         out,
         "terrain",

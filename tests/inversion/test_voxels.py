@@ -84,11 +84,14 @@ def test_the_planted_mass_comes_back_where_it_is() -> None:
 
 
 def test_bounds_hold_and_the_misfit_with_them() -> None:
-    bounded = COARSE.model_copy(update={"lowest": 0.0, "highest": 350.0})
+    bounded = COARSE.model_copy(update={"lowest": -50.0, "highest": 400.0})
     model = fit_voxels(flown(), ground(), bounded)
     density = model["voxel_density"].to_numpy()
-    assert density.min() >= 0.0
-    assert density.max() <= 350.0
+    assert density.min() >= -50.0
+    assert density.max() <= 400.0
+    # both bounds are in use
+    assert np.count_nonzero(density == -50.0) > 0
+    assert np.count_nonzero(density == 400.0) > 0
     assert model["voxel_density"].attrs["chi_squared"] == pytest.approx(1.0, abs=0.01)
 
 
