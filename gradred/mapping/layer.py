@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any, Final, Literal
 
 import numpy as np
 import xarray as xr
 from numpy.typing import NDArray
-from pydantic import Field
+from pydantic import Field, model_validator
 from scipy.interpolate import LinearNDInterpolator, NearestNDInterpolator, RegularGridInterpolator
 from scipy.linalg import cho_factor, cho_solve, solve_triangular
 from scipy.ndimage import uniform_filter
@@ -17,6 +18,7 @@ from scipy.spatial import cKDTree
 
 from gradred import survey
 from gradred.errors import FitError, SurveyError
+from gradred.mapping.layout import Sheet, clear_of, line_spacing, source_grid
 from gradred.newton.layer import pull_rows, tensor_rows
 from gradred.stage import Cost, Metres, Settings, Sizes, progress, stage
 from gradred.tensor import enu_to_grid
@@ -26,6 +28,11 @@ Array = NDArray[np.float64]
 _CHUNK: Final = 400
 _LOOSE: Final = 1e4
 """E: standard deviation a priori of the constant of each component, which is left to the data."""
+
+_LEVEL: Final = (
+    "attraction of the masses of the layer alone: its constant, and what is longer than the block, "
+    "are not told by gradients"
+)
 
 
 class MapSettings(Settings):
@@ -40,8 +47,11 @@ class MapSettings(Settings):
     clearance: Metres = Field(
         80.0, ge=0, le=5000, description="height of the drape above the terrain model"
     )
-    height: Metres = Field(
-        1000.0, ge=-500, le=20_000, description="ellipsoidal height of the level surface"
+    height: Metres | None = Field(
+        None,
+        ge=-500,
+        le=20_000,
+        description="ellipsoidal height of the level surface; stated with it, and only with it",
     )
     spacing: Metres | None = Field(
         None,
@@ -60,6 +70,12 @@ class MapSettings(Settings):
         9000, ge=100, le=30_000, description="largest number of sources; memory grows as its square"
     )
 
+    @model_validator(mode="after")
+    def _stated(self) -> MapSettings:
+        if (self.surface == "level") != (self.height is not None):
+            raise ValueError("state 'height' with a level surface, and only with it")
+        return self
+
 
 @dataclass(frozen=True)
 class Layer:
@@ -77,9 +93,7 @@ class Layer:
 
     def tensor(self, points: Array) -> Array:
         """Return the (n, 6) tensor of the layer at points, E, ``grid``, without the constants."""
-        return np.concatenate(
-            [tensor_rows(part, self.sources) @ self.masses for part in _parts(points)]
-        )
+        return predict(self.sources, self.masses, points)
 
     def pull(self, points: Array) -> Array:
         """Return the (n,) vertical attraction at points, mGal, positive down."""
@@ -99,7 +113,33 @@ def _parts(points: Array) -> list[Array]:
     return [points[first : first + _CHUNK] for first in range(0, len(points), _CHUNK)]
 
 
-def fit_layer(points: Array, readings: Array, sigma: Array, sources: Array) -> Layer:
+def predict(sources: Array, masses: Array, points: Array) -> Array:
+    """Return the tensor of a layer of point masses at points, in the ``grid`` frame.
+
+    Parameters
+    ----------
+    sources : (m, 3) array
+        Easting, northing, height, m.
+    masses : (m,) array
+        In units of ``newton.layer.UNIT_MASS``, 1e9 kg.
+    points : (n, 3) array
+        Easting, northing, height, m; above the sources by their spacing or more.
+
+    Returns
+    -------
+    (n, 6) array
+        E; without the constants of the readings.
+    """
+    return np.concatenate([tensor_rows(part, sources) @ masses for part in _parts(points)])
+
+
+def fit_layer(
+    points: Array,
+    readings: Array,
+    sigma: Array,
+    sources: Array,
+    prior_sd: float | None = None,
+) -> Layer:
     r"""Fit masses and one constant per component to readings in the ``grid`` frame.
 
     .. math:: \min_{m, c} \sum \frac{(Γ_{obs} - K m - c)^2}{σ^2} + \frac{|m|^2}{τ^2}
@@ -120,6 +160,8 @@ def fit_layer(points: Array, readings: Array, sigma: Array, sources: Array) -> L
         Standard deviation of each, E.
     sources : (m, 3) array
         Easting, northing, height, m.
+    prior_sd : float, optional
+        τ, 1e9 kg; found from the readings where it is not given.
 
     Returns
     -------
@@ -152,8 +194,20 @@ def fit_layer(points: Array, readings: Array, sigma: Array, sources: Array) -> L
         misfit = power - float(right @ estimate)
         return factor, estimate, 0.5 * (misfit + log_det + 2.0 * m * log_prior)
 
+    if prior_sd is None:
+        prior_sd = _likeliest(solved, normal, power / count)
+    factor, estimate, value = solved(float(np.log(prior_sd)))
+    lower = np.asarray(np.tril(factor[0]))
+    return Layer(sources, estimate[:m], estimate[m:], lower, prior_sd, -value)
+
+
+def _likeliest(
+    solved: Callable[[float], tuple[Any, Array, float]], normal: Array, power: float
+) -> float:
+    """Return the strength a priori that maximises the marginal likelihood."""
+    m = len(normal) - 6
     # readings of a few E from masses of unit order at the start; four decades on either side
-    start = np.log(np.sqrt(max(power / count, 1.0) / max(np.trace(normal[:m, :m]) / m, 1e-300)))
+    start = np.log(np.sqrt(max(power, 1.0) / max(np.trace(normal[:m, :m]) / m, 1e-300)))
     progress(0.5, 1.0, "strength of the layer")
     # the likelihood is flat within a tenth of its logarithm: 0.3 moves a map by 1 % of its sd
     found = minimize_scalar(
@@ -162,9 +216,7 @@ def fit_layer(points: Array, readings: Array, sigma: Array, sources: Array) -> L
         method="bounded",
         options={"xatol": 0.3},
     )
-    factor, estimate, value = solved(float(found.x))
-    lower = np.asarray(np.tril(factor[0]))
-    return Layer(sources, estimate[:m], estimate[m:], lower, float(np.exp(found.x)), -float(value))
+    return float(np.exp(found.x))
 
 
 def _normal_equations(
@@ -192,25 +244,6 @@ def _normal_equations(
     return normal, right, power, count
 
 
-def line_spacing(easting: Array, northing: Array, line: NDArray[np.intp]) -> float:
-    """Return the spacing of lines, m: the area that the stations cover over the length flown.
-
-    The area is that of cells of 2.5 % of the block's extent that hold a station, closed over the
-    gaps between lines by the convex hull of each row; exact for an even pattern to a few per cent.
-    """
-    length = 0.0
-    for number in np.unique(line):
-        here = line == number
-        length += float(np.hypot(np.diff(easting[here]), np.diff(northing[here])).sum())
-    area = 0.0
-    edges = np.linspace(northing.min(), northing.max(), 41)
-    row = np.clip(np.digitize(northing, edges) - 1, 0, 39)
-    for number in range(40):
-        here = easting[row == number]
-        area += float(np.ptp(here)) * (edges[1] - edges[0]) if len(here) > 1 else 0.0
-    return area / length if length > 0.0 and area > 0.0 else float("nan")
-
-
 def _line_spacing(lines: xr.Dataset, points: Array) -> float:
     """Return the spacing of the traverses; of all lines where no kind was delivered."""
     good = survey.good(lines)
@@ -221,41 +254,7 @@ def _line_spacing(lines: xr.Dataset, points: Array) -> float:
     return line_spacing(points[chosen, 0], points[chosen, 1], line[chosen])
 
 
-def source_grid(points: Array, spacing: float, depth: float) -> Array:
-    """Return sources in the middle of a net of squares, ``depth`` below the flown surface.
-
-    The net reaches two spacings, or one depth, beyond the stations, and only squares within that
-    reach of a station hold a source.
-    """
-    reach = max(2.0 * spacing, depth)
-    low, high = points[:, :2].min(axis=0) - reach, points[:, :2].max(axis=0) + reach
-    axes = [np.arange(low[a] + 0.5 * spacing, high[a] + 0.5 * spacing, spacing) for a in (0, 1)]
-    x, y = (part.ravel() for part in np.meshgrid(*axes))
-    distance, nearest = cKDTree(points[:, :2]).query(np.column_stack([x, y]), k=8)
-    near = np.asarray(distance)[:, 0] <= reach
-    # the lowest of the eight nearest stations: no source above any of them
-    surface = points[:, 2][np.asarray(nearest)].min(axis=1)
-    return np.column_stack([x, y, surface - depth])[near]
-
-
-@dataclass(frozen=True)
-class _Sheet:
-    """The map: cell centres along both axes, heights (rows, columns), and cells near stations."""
-
-    easting: Array
-    northing: Array
-    heights: Array
-    covered: NDArray[np.bool_]
-
-    @property
-    def points(self) -> Array:
-        x, y = np.meshgrid(self.easting, self.northing)
-        return np.column_stack([x.ravel(), y.ravel(), self.heights.ravel()])[self.covered.ravel()]
-
-
-def _sheet(
-    points: Array, terrain: xr.Dataset | None, settings: MapSettings, reach: float
-) -> _Sheet:
+def _sheet(points: Array, terrain: xr.Dataset | None, settings: MapSettings, reach: float) -> Sheet:
     cell = settings.cell
     axes = [
         np.arange(np.floor(points[:, a].min() / cell), np.ceil(points[:, a].max() / cell)) * cell
@@ -266,13 +265,13 @@ def _sheet(
     near = cKDTree(points[:, :2]).query(np.column_stack([x.ravel(), y.ravel()]))[0]
     covered = np.asarray(near).reshape(x.shape) <= reach
     heights = _surface(points, x, y, terrain, settings)
-    return _Sheet(axes[0], axes[1], heights, covered & np.isfinite(heights))
+    return Sheet(axes[0], axes[1], heights, covered & np.isfinite(heights))
 
 
 def _surface(
     points: Array, x: Array, y: Array, terrain: xr.Dataset | None, settings: MapSettings
 ) -> Array:
-    if settings.surface == "level":
+    if settings.height is not None:
         return np.full(x.shape, settings.height)
     if settings.surface == "flown":
         linear = LinearNDInterpolator(points[:, :2], points[:, 2])(x, y)
@@ -321,14 +320,13 @@ def map_field(
     """
     survey.frame_of("lines", lines, "gradient", "enu", where="stage map_field")
     points, readings, sigma = used_readings(lines)
-    _enough(len(points))
-    apart = _line_spacing(lines, points)
+    apart = _line_spacing(lines, points) if len(points) else np.nan
+    _enough(points, sigma, apart)
     spacing = settings.spacing or 0.5 * apart
-    above = float(np.median(lines["clearance"])) if "clearance" in lines else settings.clearance
-    sources = source_grid(points, spacing, settings.depth or apart + above)
+    sources = source_grid(points, spacing, settings.depth or apart + _clearance(lines, settings))
     _not_too_many(len(sources), settings, spacing)
     layer = fit_layer(points, readings, sigma, sources)
-    sheet = _sheet(points, terrain, settings, 1.5 * apart)
+    sheet, low = clear_of(_sheet(points, terrain, settings, 1.5 * apart), sources, spacing)
     grid = survey.new("grid", lines.attrs["crs"], easting=sheet.easting, northing=sheet.northing)
     grid = _mapped(grid, sheet, layer)
     residual = readings - layer.tensor(points) - layer.constants
@@ -347,7 +345,15 @@ def map_field(
         shortest_wavelength=2.0 * apart,
         surface_kind=settings.surface,
         missing_cells=int(np.count_nonzero(~sheet.covered)),
+        cells_too_near_the_layer=low,
     )
+
+
+def _clearance(lines: xr.Dataset, settings: MapSettings) -> float:
+    """Return the clearance that was flown; the one of the settings where none was delivered."""
+    if "clearance" not in lines or not np.isfinite(lines["clearance"]).any():
+        return settings.clearance
+    return float(np.nanmedian(lines["clearance"]))
 
 
 def used_readings(lines: xr.Dataset) -> tuple[Array, Array, Array]:
@@ -365,7 +371,7 @@ def used_readings(lines: xr.Dataset) -> tuple[Array, Array, Array]:
     return points[good], readings, sigma
 
 
-def _mapped(grid: xr.Dataset, sheet: _Sheet, layer: Layer) -> xr.Dataset:
+def _mapped(grid: xr.Dataset, sheet: Sheet, layer: Layer) -> xr.Dataset:
     points, shape = sheet.points, sheet.heights.shape
 
     def spread(values: Array) -> Array:
@@ -383,17 +389,30 @@ def _mapped(grid: xr.Dataset, sheet: _Sheet, layer: Layer) -> xr.Dataset:
         pull_sd[part] = layer.sigma(pull_rows(points[part], layer.sources))
     grid = survey.put("grid", grid, "gradient", spread(tensor), frame="grid")
     grid = survey.put("grid", grid, "sigma", spread(tensor_sd), frame="grid")
-    grid = survey.put("grid", grid, "gz", spread(pull))
+    grid = survey.put("grid", grid, "gz", spread(pull), level=_LEVEL)
     grid = survey.put("grid", grid, "sigma_gz", spread(pull_sd))
     return survey.put("grid", grid, "surface", np.where(sheet.covered, sheet.heights, np.nan))
 
 
-def _enough(stations: int) -> None:
-    if stations < 50:
+def _enough(points: Array, sigma: Array, apart: float) -> None:
+    if len(points) < 50:
         raise FitError(
-            f"only {stations} good stations are left to map",
+            f"only {len(points)} good stations are left to map",
             where="stage map_field",
             cure="look at the flags of the lines",
+        )
+    if not np.isfinite(apart):
+        raise FitError(
+            "the good stations cover no area",
+            where="stage map_field",
+            cure="a map needs two lines or more, beside each other",
+        )
+    known = sigma[np.isfinite(sigma)]
+    if not len(known) or known.min() <= 0.0:
+        raise SurveyError(
+            f"the smallest of 'sigma' is {known.min(initial=0.0):g} E, but must be above 0",
+            where="stage map_field",
+            cure="put estimate_noise before this stage",
         )
 
 
@@ -402,5 +421,5 @@ def _not_too_many(sources: int, settings: MapSettings, spacing: float) -> None:
         raise FitError(
             f"{sources} sources at {spacing:.0f} m are more than the {settings.most} allowed",
             where="stage map_field",
-            cure=f"set a larger 'spacing', or 'most' ({24e-9 * sources**2:.0f} GB will be used)",
+            cure=f"set a larger 'spacing', or 'most' ({24e-6 * sources**2:.0f} MB will be used)",
         )
