@@ -109,7 +109,7 @@ def _foot(grid: xr.Dataset, name: str, ground: Ground) -> str:
 def tensor_sheet(grid: xr.Dataset, survey_name: str) -> Figure:
     """Return the figure of the six components, each in its place of the tensor."""
     ground = ground_of(grid)
-    figure = Figure(figsize=(11.0, 9.4), layout="constrained", facecolor="white")
+    figure = Figure(figsize=(11.0, 9.0), layout="constrained", facecolor="white")
     places = figure.subplots(3, 3)
     maps = maps_of(grid)
     for component, (row, column) in _PLACES.items():
@@ -117,9 +117,9 @@ def tensor_sheet(grid: xr.Dataset, survey_name: str) -> Figure:
         axes, values = places[row, column], maps[name]
         field = values.to_numpy()
         image = draw_field(axes, ground, name, field, limits_of(name, field))
-        draw_frame(axes, ground, labels=row == column)
-        axes.set_title(title_of(name), fontsize=11, color=INK)
-        colour_bar(figure, axes, image, unit_of(values))
+        draw_frame(axes, ground, labels=False)
+        axes.set_title(title_of(name), fontsize=12, color=INK, loc="left")
+        colour_bar(figure, axes, image, unit_of(values), pad=0.02)
     for row, column in ((1, 0), (2, 0), (2, 1)):
         places[row, column].axis("off")
     places[2, 0].text(

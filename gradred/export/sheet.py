@@ -119,7 +119,7 @@ def draw_field(
 
 
 def draw_frame(axes: Axes, ground: Ground, *, labels: bool = True) -> None:
-    """Draw the grid's axes in kilometres and faint meridians and parallels."""
+    """Draw the grid's axes in kilometres and faint meridians and parallels, named if asked."""
     axes.set_xlim(ground.west / 1e3, ground.east / 1e3)
     axes.set_ylim(ground.south / 1e3, ground.north / 1e3)
     axes.set_aspect("equal")
@@ -131,10 +131,10 @@ def draw_frame(axes: Axes, ground: Ground, *, labels: bool = True) -> None:
         axes.set_xlabel("easting, km", fontsize=7, color=INK)
         axes.set_ylabel("northing, km", fontsize=7, color=INK)
     axes.ticklabel_format(useOffset=False, style="plain")
-    _graticule(axes, ground)
+    _graticule(axes, ground, labels=labels)
 
 
-def _graticule(axes: Axes, ground: Ground) -> None:
+def _graticule(axes: Axes, ground: Ground, *, labels: bool) -> None:
     there = Transformer.from_crs(ground.crs, "EPSG:4326", always_xy=True)
     back = Transformer.from_crs("EPSG:4326", ground.crs, always_xy=True)
     corners = np.array(
@@ -148,7 +148,7 @@ def _graticule(axes: Axes, ground: Ground) -> None:
         x, y = back.transform(np.full(50, value), np.linspace(lat.min(), lat.max(), 50))
         axes.plot(x / 1e3, y / 1e3, **style)
         top = float(np.interp(ground.north, y, x))
-        if ground.west < top < ground.east:
+        if labels and ground.west < top < ground.east:
             axes.text(
                 top / 1e3,
                 ground.north / 1e3,
@@ -161,7 +161,7 @@ def _graticule(axes: Axes, ground: Ground) -> None:
         x, y = back.transform(np.linspace(lon.min(), lon.max(), 50), np.full(50, value))
         axes.plot(x / 1e3, y / 1e3, **style)
         side = float(np.interp(ground.east, x, y))
-        if ground.south < side < ground.north:
+        if labels and ground.south < side < ground.north:
             axes.text(
                 ground.east / 1e3,
                 side / 1e3,
@@ -220,7 +220,9 @@ def _north(axes: Axes, ground: Ground, x: float, y: float, size: float) -> None:
     arrows = [("grid N", 0.0)]
     if abs(ground.convergence) > 0.1:
         # true north lies at minus the convergence from grid north, clockwise
-        arrows.append((f"true N {-ground.convergence:+.1f}°", -ground.convergence))
+        arrows.append(
+            (f"true N {-ground.convergence:+.1f}°".replace("-", "−"), -ground.convergence)
+        )
     for rank, (label, angle) in enumerate(arrows):
         # drawn five times too wide, and said in figures: one degree does not show
         turn = np.radians(np.clip(5.0 * angle, -40.0, 40.0))
@@ -245,9 +247,11 @@ def _north(axes: Axes, ground: Ground, x: float, y: float, size: float) -> None:
         )
 
 
-def colour_bar(figure: Figure, axes: Axes, image: AxesImage, unit: str) -> None:
+def colour_bar(
+    figure: Figure, axes: Axes, image: AxesImage, unit: str, *, pad: float = 0.09
+) -> None:
     """Put a colour bar beside a map."""
-    bar = figure.colorbar(image, ax=axes, shrink=0.8, pad=0.09, aspect=28, extend="both")
+    bar = figure.colorbar(image, ax=axes, shrink=0.8, pad=pad, aspect=28, extend="both")
     bar.ax.tick_params(labelsize=7, colors=INK, width=0.5)
     bar.set_label(unit, fontsize=8, color=INK)
     bar.outline.set_linewidth(0.5)
