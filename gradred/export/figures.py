@@ -21,9 +21,9 @@ from gradred.tensor import COMPONENTS
 
 Array = NDArray[np.float64]
 
-# batlow at even steps: told apart also in grey
-HUES: Final = tuple(cm.batlow(x) for x in np.linspace(0.05, 0.8, 6))
-_KINDS: Final = {"traverse": HUES[0], "tie": HUES[4], "repeat": HUES[2]}
+# told apart also in grey and by the colour-blind: steps of lightness with a change of hue
+HUES: Final = ("#1f3a5f", "#c2592f", "#4b8b6a", "#9a7bb8", "#c79a2b", "#6b7684")
+_KINDS: Final = {"traverse": HUES[0], "tie": HUES[1], "repeat": HUES[2]}
 
 
 def _figure(width: float, height: float) -> Figure:
@@ -226,15 +226,17 @@ def model_sections(model: xr.Dataset) -> Figure:
         axes.set_title(at, fontsize=8, color=INK, loc="left")
         _tidy(axes, f"{name}, km", "height, m")
     if "body_kind" in model:
-        _outlines(plan, across, along, model)
+        _outlines(plan, across, along, model, (east[column], north[row]))
     bar = figure.colorbar(image, ax=[plan, across, along], shrink=0.5, aspect=30)
     bar.set_label("density contrast, kg/m3", fontsize=8, color=INK)
     bar.ax.tick_params(labelsize=7)
     return figure
 
 
-def _outlines(plan: Any, across: Any, along: Any, model: xr.Dataset) -> None:
-    """Draw the box around every fitted body on the plan and, where they are near, the sections."""
+def _outlines(
+    plan: Any, across: Any, along: Any, model: xr.Dataset, cut: tuple[float, float]
+) -> None:
+    """Draw the box around every fitted body on the plan, and on the sections that cross it."""
     for kind, names, values in zip(
         model["body_kind"].to_numpy(),
         model["body_parameter"].to_numpy(),
@@ -244,10 +246,16 @@ def _outlines(plan: Any, across: Any, along: Any, model: xr.Dataset) -> None:
         known = {str(n).split(" [")[0]: v for n, v in zip(names, values, strict=True) if n}
         low, high = body_box(str(kind), known)
         style: dict[str, Any] = {"fill": False, "edgecolor": INK, "linewidth": 0.9}
-        for axes, a, b, unit in ((plan, 0, 1, 1e3), (across, 0, 2, 1.0), (along, 1, 2, 1.0)):
-            corner = (low[a] / 1e3, low[b] / unit)
-            size = ((high[a] - low[a]) / 1e3, (high[b] - low[b]) / unit)
-            axes.add_patch(Rectangle(corner, *size, **style))
+        crossed = [low[axis] <= cut[axis] <= high[axis] for axis in (0, 1)]
+        for axes, a, b, unit, shown in (
+            (plan, 0, 1, 1e3, True),
+            (across, 0, 2, 1.0, crossed[1]),
+            (along, 1, 2, 1.0, crossed[0]),
+        ):
+            if shown:
+                corner = (low[a] / 1e3, low[b] / unit)
+                size = ((high[a] - low[a]) / 1e3, (high[b] - low[b]) / unit)
+                axes.add_patch(Rectangle(corner, *size, **style))
 
 
 def body_box(kind: str, known: dict[str, float]) -> tuple[Array, Array]:

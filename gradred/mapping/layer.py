@@ -57,7 +57,7 @@ class MapSettings(Settings):
         None,
         ge=1,
         le=10_000,
-        description="distance between sources; half the line spacing where it is not given",
+        description="distance between sources; half their depth where it is not given",
     )
     depth: Metres | None = Field(
         None,
@@ -322,8 +322,10 @@ def map_field(
     points, readings, sigma = used_readings(lines)
     apart = _line_spacing(lines, points) if len(points) else np.nan
     _enough(points, sigma, apart)
-    spacing = settings.spacing or 0.5 * apart
-    sources = source_grid(points, spacing, settings.depth or apart + _clearance(lines, settings))
+    depth = settings.depth or apart + _clearance(lines, settings)
+    # two spacings above the layer the pattern of single masses has faded to exp(-4π), 3e-6
+    spacing = settings.spacing or 0.5 * depth
+    sources = source_grid(points, spacing, depth)
     _not_too_many(len(sources), settings, spacing)
     layer = fit_layer(points, readings, sigma, sources)
     sheet, low = clear_of(_sheet(points, terrain, settings, 1.5 * apart), sources, spacing)
