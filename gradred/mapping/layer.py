@@ -292,7 +292,8 @@ def _surface(
 
 def _forecast(settings: MapSettings, sizes: Sizes) -> Cost:
     length = sizes["lines"] * max(sizes["width"], sizes["length"], 1.0)
-    spacing = settings.spacing or 0.5 * sizes["width"] * sizes["length"] / length
+    apart = sizes["width"] * sizes["length"] / length
+    spacing = settings.spacing or 0.5 * (settings.depth or apart + settings.clearance)
     count = (sizes["width"] / spacing + 6.0) * (sizes["length"] / spacing + 6.0)
     cells = sizes["width"] * sizes["length"] / settings.cell**2
     # products of matrices at 50 GFLOP/s: normal equations, 15 factors, posterior of 7 maps
