@@ -39,9 +39,10 @@ def run_pipeline(pipeline: Path, into: Path | None) -> None:
         from gradred import pipeline as chain
         from gradred.pipeline_file import read_pipeline
 
+        understood = read_pipeline(pipeline, chain.STAGES)
         folder = into or Path(f"{pipeline.stem}-run")
         with _Screen() as screen:
-            made = chain.run(read_pipeline(pipeline, chain.STAGES), folder, screen)
+            made = chain.run(understood, folder, screen)
         click.echo(f"{len(made.products)} products and record.json are in {folder}")
         reports = [path for path in made.products if path.suffix == ".html"]
         for path in reports:
