@@ -141,6 +141,11 @@ VARIABLES: Final[tuple[Variable, ...]] = (
     ),
     *_rows(
         "grid",
+        _TENSOR,
+        ("residual", "E", "reading minus mapped field and constant; missing where not used"),
+    ),
+    *_rows(
+        "grid",
         ("component",),
         ("residual_rms", "E", "rms of reading minus mapped field at the stations"),
         ("chi_squared", "1", "mean of squared residual over variance at the stations"),

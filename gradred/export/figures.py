@@ -150,24 +150,30 @@ def line_profile(lines: xr.Dataset, name: str, model: xr.Dataset | None) -> Figu
     return figure
 
 
-def residual_histograms(model: xr.Dataset, lines: xr.Dataset) -> Figure:
+def residual_histograms(
+    lines: xr.Dataset, grid: xr.Dataset | None, model: xr.Dataset | None
+) -> Figure:
     """Return histograms of residual over standard deviation, beside the normal law."""
-    kinds = [k for k in ("bodies", "voxels") if f"residual_{k}" in model]
+    shown = {}
+    if grid is not None and "residual" in grid:
+        # the noise of a component hardly changes by the turn from true to grid axes
+        shown["field"] = grid["residual"].to_numpy()
+    for kind in ("bodies", "voxels"):
+        if model is not None and f"residual_{kind}" in model:
+            shown[kind] = model[f"residual_{kind}"].to_numpy()
     figure = _figure(7.4, 2.4)
     good, sigma = survey.good(lines), lines["sigma"].to_numpy()
     edges = np.linspace(-4, 4, 41)
     middle = 0.5 * (edges[1:] + edges[:-1])
-    for axes, component, number in zip(
-        figure.subplots(1, 6, sharey=True), COMPONENTS, range(6), strict=True
-    ):
-        for kind, hue in zip(kinds, ("#b3261e", HUES[0]), strict=False):
-            score = (model[f"residual_{kind}"].to_numpy() / sigma)[good, number]
-            counts, _ = np.histogram(score, edges, density=True)
+    row = figure.subplots(1, 6, sharey=True)
+    for number, (axes, component) in enumerate(zip(row, COMPONENTS, strict=True)):
+        for hue, (kind, residual) in zip(HUES, shown.items(), strict=False):
+            counts, _ = np.histogram((residual / sigma)[good, number], edges, density=True)
             axes.step(middle, counts, where="mid", lw=0.9, color=hue, label=kind)
         axes.plot(middle, np.exp(-0.5 * middle**2) / np.sqrt(2 * np.pi), lw=0.8, ls="--", color=INK)
         axes.set_title(component, fontsize=8, color=INK)
         _tidy(axes, "residual / sd", "")
-    axes.legend(fontsize=6, frameon=False)
+    row[-1].legend(fontsize=6, frameon=False)
     return figure
 
 

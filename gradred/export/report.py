@@ -192,8 +192,8 @@ def _worth(
                 noise.append([label, said(about[name])])
     fits = _fits(grid, model)
     shown = None
-    if model is not None and "sigma" in lines and fits:
-        shown = picture(figures.residual_histograms(model, lines), settings.dots)
+    if "sigma" in lines and fits:
+        shown = picture(figures.residual_histograms(lines, grid, model), settings.dots)
     return {"checks": checks, "noise": noise, "fits": fits, "histograms": shown}
 
 

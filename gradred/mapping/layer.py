@@ -306,7 +306,17 @@ def _forecast(settings: MapSettings, sizes: Sizes) -> Cost:
     needs={
         "lines": ("gradient", "sigma", "line", "height", "convergence", "flag"),
     },
-    adds=("gradient", "sigma", "gz", "sigma_gz", "surface", "residual_rms", "chi_squared", "datum"),
+    adds=(
+        "gradient",
+        "sigma",
+        "gz",
+        "sigma_gz",
+        "surface",
+        "residual",
+        "residual_rms",
+        "chi_squared",
+        "datum",
+    ),
     physics=fit_layer,
     forecast=_forecast,
 )
@@ -333,6 +343,9 @@ def map_field(
     grid = survey.new("grid", lines.attrs["crs"], easting=sheet.easting, northing=sheet.northing)
     grid = _mapped(grid, sheet, layer)
     residual = readings - layer.tensor(points) - layer.constants
+    everywhere = np.full((lines.sizes["station"], 6), np.nan)
+    everywhere[survey.good(lines)] = residual
+    grid = survey.put("grid", grid, "residual", everywhere, frame="grid")
     rms = np.sqrt(np.nanmean(residual**2, axis=0))
     grid = survey.put("grid", grid, "residual_rms", rms, frame="grid")
     grid = survey.put("grid", grid, "chi_squared", np.nanmean((residual / sigma) ** 2, axis=0))

@@ -383,3 +383,11 @@ def test_the_layer_is_the_least_squares_solution() -> None:
     some = tensor_rows(points[:3], sources).reshape(-1, 12)
     sd = np.sqrt(np.einsum("km,mn,kn->k", some, covariance[:12, :12], some))
     np.testing.assert_allclose(layer.sigma(some), sd, rtol=1e-6)
+
+
+def test_residuals_stand_at_the_stations() -> None:
+    grid = mapped()
+    residual = grid["residual"].to_numpy()
+    assert residual.shape == flown()[1]["gradient"].shape
+    rms = np.sqrt(np.nanmean(residual**2, axis=0))
+    np.testing.assert_allclose(rms, grid["residual_rms"], rtol=1e-12)
