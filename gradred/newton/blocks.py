@@ -1,0 +1,445 @@
+"""Compiled sums over blocks of columns, and the walk through the pyramid that picks them.
+
+A block is taken as one vertical line of mass from its mean height downward without end; what lies
+below the base is taken away again as one exact rectangle. With r = (X, Y, Z) from the station to
+the top of the line, per unit G ρ and area,
+
+    Γ_zz = -Z/R³,  Γ_xz = -X/R³,  Γ_xx = X² k - g,  Γ_xy = X Y k,
+    g = 1 / (R (R - Z)),  k = g² (2 - Z/R)
+
+which follows by integrating the tensor of a point along z. The rest of the block's shape acts as a
+dipole at the top: heights against position, the spread of heights, and the width of the block
+(whose second horizontal derivatives are, for a harmonic function, the vertical one reversed).
+Stations that are neighbours share the blocks far from all of them.
+"""
+
+from __future__ import annotations
+
+import math
+from typing import Any
+
+import numpy as np
+from numba import njit, prange
+from numpy.typing import NDArray
+
+from gradred.newton.columns import LANES, endless_rectangle, gather_columns, sum_columns
+
+Array = NDArray[np.float64]
+Index = NDArray[np.int64]
+
+_CHUNK = 256
+
+
+@njit(inline="never", forceinline=True, error_model="numpy", cache=True)
+def _line(
+    x: Any, y: Any, z: Any, area: Any, skew_x: Any, skew_y: Any, lift: Any, one: Any
+) -> tuple[Any, Any, Any, Any, Any]:
+    """Return xx, xy, xz, yy, yz of a line of mass and the dipole at its top, in one's precision."""
+    two = one + one
+    three = two + one
+    s2 = x * x + y * y
+    r2 = s2 + z * z
+    r = np.sqrt(r2)
+    # R - Z loses its digits under a summit far above: s²/(R + Z) is the same number
+    below = r + abs(z)
+    gap = below if z <= one - one else s2 / below
+    inverse = one / (r2 * gap)
+    u = gap * inverse  # 1/R²
+    g = r * inverse
+    w = r * u * u  # 1/R³
+    k = g * g * (two - z * r * u)
+    along = skew_x * x + skew_y * y + lift * z
+    p5 = three * w * u
+    p7 = (three + two) * p5 * u * along
+    curl = area * k - p7
+    even = p5 * along - area * g
+    wide = area * w
+    xx = curl * x * x + even + two * p5 * skew_x * x
+    yy = curl * y * y + even + two * p5 * skew_y * y
+    xy = curl * x * y + p5 * (skew_x * y + skew_y * x)
+    xz = p5 * (skew_x * z + lift * x) - (p7 * z + wide) * x
+    yz = p5 * (skew_y * z + lift * y) - (p7 * z + wide) * y
+    return xx, xy, xz, yy, yz
+
+
+@njit(error_model="numpy", cache=True, fastmath={"reassoc", "contract"})
+def sum_lines(buffer: Any, count: int, x: Any, y: Any, z: Any, one: Any, total: Array) -> None:
+    """Add the tensor of gathered lines seen from an offset, summed in chunks in one's precision."""
+    for first in range(0, count, _CHUNK):
+        last = min(first + _CHUNK, count)
+        bx, by, bz = buffer[0, first:last], buffer[1, first:last], buffer[2, first:last]
+        area, lift = buffer[3, first:last], buffer[6, first:last]
+        skew_x, skew_y = buffer[4, first:last], buffer[5, first:last]
+        xx = xy = xz = yy = yz = one - one
+        for i in range(last - first):
+            a, b, c, d, e = _line(
+                bx[i] - x, by[i] - y, bz[i] - z, area[i], skew_x[i], skew_y[i], lift[i], one
+            )
+            xx += a
+            xy += b
+            xz += c
+            yy += d
+            yz += e
+        total[0] += xx
+        total[1] += xy
+        total[2] += xz
+        total[3] += yy
+        total[4] += yz
+        total[5] -= xx + yy
+
+
+@njit(error_model="numpy", cache=True)
+def _around(low: float, high: float, edges: Array, inner: tuple[int, int]) -> tuple[int, int]:
+    """Return the range of blocks that meets [low, high], widened to hold an inner range."""
+    count = edges.shape[0] - 1
+    first = min(max(np.searchsorted(edges, low, side="right") - 1, 0), count)
+    last = max(min(np.searchsorted(edges, high, side="left"), count), first)
+    if inner[1] > inner[0]:
+        return min(first, inner[0]), max(last, inner[1])
+    return first, last
+
+
+@njit(error_model="numpy", cache=True)
+def _window(
+    box: tuple[float, float, float, float],
+    reach: float,
+    edges_x: Array,
+    edges_y: Array,
+    inner: tuple[int, int, int, int],
+) -> tuple[int, int, int, int]:
+    """Return the blocks of a level within reach of a box of stations, holding a finer window."""
+    i0, i1 = _around(box[0] - reach, box[1] + reach, edges_x, (inner[0] // 2, (inner[1] + 1) // 2))
+    j0, j1 = _around(box[2] - reach, box[3] + reach, edges_y, (inner[2] // 2, (inner[3] + 1) // 2))
+    return i0, i1, j0, j1
+
+
+@njit(error_model="numpy", cache=True)
+def _gather(
+    at: tuple[float, float, float],
+    heights: Array,
+    moments: tuple[Array, Array, Array, Array],
+    edges_x: Array,
+    edges_y: Array,
+    split: Index,
+    first: int,
+    rows: tuple[int, int],
+    columns: tuple[int, int],
+    buffer: Any,
+    n: int,
+) -> int:
+    """Append the lines of a rectangle of blocks to the buffer, relative to a place; return n.
+
+    ``first`` is where the level begins in the moments, -1 for the cells, which have only heights.
+    """
+    top, skew_x, skew_y, spread = moments
+    width = edges_x.shape[0] - 1
+    wide, high = split[0], split[1]
+    share = 1.0 / (wide * high)
+    for j in range(rows[0], rows[1]):
+        depth = edges_y[j + 1] - edges_y[j]
+        by = 0.5 * (edges_y[j] + edges_y[j + 1]) - at[1]
+        for i in range(columns[0], columns[1]):
+            side = edges_x[i + 1] - edges_x[i]
+            bx = 0.5 * (edges_x[i] + edges_x[i + 1]) - at[0]
+            area = side * depth
+            if wide * high == 1:
+                apart, short = 0.0, (side * side + depth * depth) / 24.0
+            else:
+                apart = math.sqrt(abs(side * side - depth * depth) / 12.0)
+                short = min(side, depth) ** 2 / 12.0
+            ox, oy = (apart, 0.0) if wide == 2 else (0.0, apart)
+            for sign in range(-1, wide * high, 2):
+                m = sign if wide * high == 2 else 0
+                buffer[0, n], buffer[1, n] = bx + m * ox, by + m * oy
+                buffer[3, n] = share * area
+                if first < 0:
+                    buffer[2, n] = heights[j, i] - at[2]
+                    buffer[4, n] = buffer[5, n] = 0.0
+                    buffer[6, n] = -0.5 * share * area * short
+                else:
+                    b = first + j * width + i
+                    buffer[2, n] = top[b] - at[2]
+                    buffer[4, n], buffer[5, n] = share * skew_x[b], share * skew_y[b]
+                    buffer[6, n] = 0.5 * share * (spread[b] - area * short)
+                n += 1
+    return n
+
+
+@njit(error_model="numpy", cache=True)
+def _gather_ring(
+    at: tuple[float, float, float],
+    heights: Array,
+    moments: tuple[Array, Array, Array, Array],
+    edges_x: Array,
+    edges_y: Array,
+    split: Index,
+    first: int,
+    inner: tuple[int, int, int, int],
+    outer: tuple[int, int, int, int],
+    buffer: Any,
+    n: int,
+) -> int:
+    """Append the blocks inside the outer and outside the inner window: four rectangles."""
+    i0, i1, j0, j1 = inner
+    o0, o1, q0, q1 = outer
+    if i1 <= i0 or j1 <= j0:
+        i0 = i1 = o1
+        j0 = j1 = q1
+    level = (heights, moments, edges_x, edges_y, split, first)
+    n = _gather(at, *level, (q0, j0), (o0, o1), buffer, n)
+    n = _gather(at, *level, (j0, j1), (o0, i0), buffer, n)
+    n = _gather(at, *level, (j0, j1), (i1, o1), buffer, n)
+    return _gather(at, *level, (j1, q1), (o0, o1), buffer, n)
+
+
+@njit(error_model="numpy", cache=True)
+def _padded(buffer: Any, n: int) -> int:
+    """Fill the buffer with lines of no mass up to a whole number of lanes."""
+    while n % LANES:
+        for c in range(7):
+            buffer[c, n] = 0.0
+        buffer[0, n] = buffer[2, n] = -1e6
+        n += 1
+    return n
+
+
+@njit(error_model="numpy", cache=True)
+def _edges(edges: Array, starts: Index, shape: Index, level: int, axis: int) -> Array:
+    """Return the edges of a level along x (axis 1) or y (axis 0)."""
+    first = starts[level, 2 - axis]
+    return edges[first : first + shape[level, axis] + 1]
+
+
+@njit(error_model="numpy", cache=True)
+def _windows(
+    box: tuple[float, float, float, float],
+    opening: float,
+    levels: tuple[int, int],
+    start: tuple[int, int, int, int],
+    end: tuple[int, int, int, int],
+    shape: Index,
+    split: Index,
+    starts: Index,
+    sizes: Array,
+    edges_x: Array,
+    edges_y: Array,
+    windows: Index,
+) -> int:
+    """Fill the inner and outer windows of a range of levels; return how many lines stand between.
+
+    The inner window of the first level is ``start``. The outer window of the last is ``end``, in
+    blocks of the level above, or everything where the last level is the uppermost.
+    """
+    count = 0
+    inner = start
+    for level in range(levels[0], levels[1]):
+        rows, columns = shape[level, 0], shape[level, 1]
+        above = inner
+        outer = (0, columns, 0, rows)
+        if level + 1 < shape.shape[0]:
+            above = end
+            if level + 1 < levels[1] or end[1] < 0:
+                ex = _edges(edges_x, starts, shape, level + 1, 1)
+                ey = _edges(edges_y, starts, shape, level + 1, 0)
+                above = _window(box, opening * sizes[level + 1], ex, ey, inner)
+            outer = (
+                2 * above[0],
+                min(2 * above[1], columns),
+                2 * above[2],
+                min(2 * above[3], rows),
+            )
+        for c in range(4):
+            windows[level, c] = inner[c]
+            windows[level, 4 + c] = outer[c]
+        hole = max(inner[1] - inner[0], 0) * max(inner[3] - inner[2], 0)
+        area = max(outer[1] - outer[0], 0) * max(outer[3] - outer[2], 0)
+        count += (area - hole) * split[level, 0] * split[level, 1]
+        inner = above
+    return count
+
+
+@njit(error_model="numpy", cache=True)
+def _fill(
+    at: tuple[float, float, float],
+    levels: tuple[int, int],
+    windows: Index,
+    heights: Array,
+    moments: tuple[Array, Array, Array, Array],
+    shape: Index,
+    split: Index,
+    starts: Index,
+    edges_x: Array,
+    edges_y: Array,
+    buffer: Any,
+) -> int:
+    """Gather the lines of a range of levels between their windows; return their number, padded."""
+    n = 0
+    for level in range(levels[0], levels[1]):
+        w = windows[level]
+        n = _gather_ring(
+            at,
+            heights,
+            moments,
+            _edges(edges_x, starts, shape, level, 1),
+            _edges(edges_y, starts, shape, level, 0),
+            split[level],
+            starts[level, 0] if level > 0 else -1,
+            (w[0], w[1], w[2], w[3]),
+            (w[4], w[5], w[6], w[7]),
+            buffer,
+            n,
+        )
+    return _padded(buffer, n)
+
+
+@njit(error_model="numpy", cache=True)
+def _shared_level(box: tuple[float, float, float, float], opening: float, sizes: Array) -> int:
+    """Return the first level whose blocks are far enough from all stations of a box to share."""
+    extent = max(box[1] - box[0], box[3] - box[2])
+    level = 1
+    while level < sizes.shape[0] and 0.5 * opening * sizes[level] < extent:
+        level += 1
+    return level
+
+
+@njit(error_model="numpy", cache=True)
+def _group(
+    points: Array,
+    base: float,
+    opening: float,
+    unit: Any,
+    heights: Array,
+    moments: tuple[Array, Array, Array, Array],
+    shape: Index,
+    split: Index,
+    starts: Index,
+    sizes: Array,
+    edges_x: Array,
+    edges_y: Array,
+    out: Array,
+) -> None:
+    """Sum the stations of one group: far blocks once for all of them, near ones for each."""
+    one = unit[0]
+    none = (0, 0, 0, 0)
+    levels = sizes.shape[0]
+    box = (points[:, 0].min(), points[:, 0].max(), points[:, 1].min(), points[:, 1].max())
+    shared = _shared_level(box, opening, sizes)
+    geometry = (shape, split, starts, sizes, edges_x, edges_y)
+    flat = (shape, split, starts, edges_x, edges_y)
+    windows = np.zeros((levels, 8), dtype=np.int64)
+    end = (0, -1, 0, -1)
+    centre = (0.5 * (box[0] + box[1]), 0.5 * (box[2] + box[3]), points[:, 2].mean())
+    far = np.empty((7, 1), unit.dtype)
+    count = 0
+    if shared < levels:
+        ex = _edges(edges_x, starts, shape, shared, 1)
+        ey = _edges(edges_y, starts, shape, shared, 0)
+        end = _window(box, opening * sizes[shared], ex, ey, none)
+        count = _windows(box, opening, (shared, levels), end, none, *geometry, windows)
+        far = np.empty((7, count + LANES), unit.dtype)
+        count = _fill(centre, (shared, levels), windows, heights, moments, *flat, far)
+    cells_x = _edges(edges_x, starts, shape, 0, 1)
+    cells_y = _edges(edges_y, starts, shape, 0, 0)
+    whole = (cells_x[0], cells_x[-1], cells_y[0], cells_y[-1])
+    for n in range(points.shape[0]):
+        at = (points[n, 0], points[n, 1], points[n, 2])
+        spot = (at[0], at[0], at[1], at[1])
+        total = np.zeros(6)
+        window = _window(spot, opening * sizes[0], cells_x, cells_y, none)
+        i0, i1, j0, j1 = window
+        if i1 > i0 and j1 > j0:
+            columns = np.empty((7, (i1 - i0) * (j1 - j0) + LANES))
+            held = gather_columns(*at, cells_x, cells_y, heights, base, window, columns, total)
+            sum_columns(columns, held, total)
+            rim = (cells_x[i0], cells_x[i1], cells_y[j0], cells_y[j1])
+            endless_rectangle(rim, at, base, 1.0, total)
+        held = _windows(spot, opening, (0, shared), window, end, *geometry, windows)
+        near = np.empty((7, held + LANES), unit.dtype)
+        held = _fill(at, (0, shared), windows, heights, moments, *flat, near)
+        sum_lines(near, held, one - one, one - one, one - one, one, total)
+        move = (at[0] - centre[0], at[1] - centre[1], at[2] - centre[2])
+        if count > 0:
+            offset = (move[0] * one, move[1] * one, move[2] * one)
+            sum_lines(far, count, *_in(unit, offset), one, total)
+        endless_rectangle(whole, at, base, -1.0, total)
+        for c in range(6):
+            out[n, c] = total[c]
+
+
+@njit(inline="always", error_model="numpy", cache=True)
+def _in(unit: Any, offset: tuple[float, float, float]) -> tuple[Any, Any, Any]:
+    """Return an offset in the precision of the unit."""
+    kept = np.empty(3, unit.dtype)
+    kept[0], kept[1], kept[2] = offset
+    return kept[0], kept[1], kept[2]
+
+
+@njit(parallel=True, error_model="numpy", cache=True)
+def pyramid_sums(
+    points: Array,
+    groups: Index,
+    base: float,
+    opening: float,
+    unit: Any,
+    heights: Array,
+    moments: tuple[Array, Array, Array, Array],
+    shape: Index,
+    split: Index,
+    starts: Index,
+    sizes: Array,
+    edges_x: Array,
+    edges_y: Array,
+    out: Array,
+) -> None:
+    """Fill (n, 6) sums per unit G ρ of grouped stations over a pyramid.
+
+    Columns within ``opening`` cell sizes are exact; blocks of level l serve from ``opening`` of
+    their sizes outward, to where the next level takes over. Group g are the stations from
+    ``groups[g]`` to ``groups[g + 1]``. ``unit`` is [1] in the precision of the far field. One
+    thread sums one group, so that the result does not depend on the number of threads.
+    """
+    for g in prange(groups.shape[0] - 1):
+        first, last = groups[g], groups[g + 1]
+        _group(
+            points[first:last],
+            base,
+            opening,
+            unit,
+            heights,
+            moments,
+            shape,
+            split,
+            starts,
+            sizes,
+            edges_x,
+            edges_y,
+            out[first:last],
+        )
+
+
+@njit(parallel=True, error_model="numpy", cache=True)
+def exact_sums(
+    points: Array, edges_x: Array, edges_y: Array, heights: Array, base: float, out: Array
+) -> None:
+    """Fill (n, 6) sums per unit G ρ over every column, all exact."""
+    columns = heights.shape[1]
+    for n in prange(points.shape[0]):
+        total = np.zeros(6)
+        buffer = np.empty((7, columns + LANES))
+        for j in range(heights.shape[0]):
+            window = (0, columns, j, j + 1)
+            held = gather_columns(
+                points[n, 0],
+                points[n, 1],
+                points[n, 2],
+                edges_x,
+                edges_y,
+                heights,
+                base,
+                window,
+                buffer,
+                total,
+            )
+            sum_columns(buffer, held, total)
+        for c in range(6):
+            out[n, c] = total[c]
