@@ -257,7 +257,10 @@ class _Reader:
             return
         said = detail["msg"].removeprefix("Value error, ")
         said = said[0].lower() + said[1:]
-        what = f"stage {entry.name!r}, setting {spelled!r}: {said}, not {detail['input']!r}"
+        given = repr(detail["input"])
+        # a whole table that misses one key is not worth repeating
+        told = f", not {given}" if len(given) < 80 else ""
+        what = f"stage {entry.name!r}, setting {spelled!r}: {said}{told}"
         if not at:
             what = f"stage {entry.name!r}: {said}"
         self.fault(
