@@ -22,44 +22,21 @@ import numpy as np
 from numba import njit, prange
 from numpy.typing import NDArray
 
-from gradred.newton.columns import LANES, endless_rectangle, gather_columns, sum_columns
+from gradred.newton.columns import (
+    LANES,
+    bend_columns,
+    endless_rectangle,
+    gather_columns,
+    line_at,
+    pull_columns,
+    pull_endless,
+    sum_columns,
+)
 
 Array = NDArray[np.float64]
 Index = NDArray[np.int64]
 
 _CHUNK = 256
-
-
-@njit(inline="never", forceinline=True, error_model="numpy", cache=True)
-def _line(
-    x: Any, y: Any, z: Any, area: Any, skew_x: Any, skew_y: Any, lift: Any, one: Any
-) -> tuple[Any, Any, Any, Any, Any]:
-    """Return xx, xy, xz, yy, yz of a line of mass and the dipole at its top, in one's precision."""
-    two = one + one
-    three = two + one
-    s2 = x * x + y * y
-    r2 = s2 + z * z
-    r = np.sqrt(r2)
-    # R - Z loses its digits under a summit far above: s²/(R + Z) is the same number
-    below = r + abs(z)
-    gap = below if z <= one - one else s2 / below
-    inverse = one / (r2 * gap)
-    u = gap * inverse  # 1/R²
-    g = r * inverse
-    w = r * u * u  # 1/R³
-    k = g * g * (two - z * r * u)
-    along = skew_x * x + skew_y * y + lift * z
-    p5 = three * w * u
-    p7 = (three + two) * p5 * u * along
-    curl = area * k - p7
-    even = p5 * along - area * g
-    wide = area * w
-    xx = curl * x * x + even + two * p5 * skew_x * x
-    yy = curl * y * y + even + two * p5 * skew_y * y
-    xy = curl * x * y + p5 * (skew_x * y + skew_y * x)
-    xz = p5 * (skew_x * z + lift * x) - (p7 * z + wide) * x
-    yz = p5 * (skew_y * z + lift * y) - (p7 * z + wide) * y
-    return xx, xy, xz, yy, yz
 
 
 @njit(error_model="numpy", cache=True, fastmath={"reassoc", "contract"})
@@ -72,7 +49,7 @@ def sum_lines(buffer: Any, count: int, x: Any, y: Any, z: Any, one: Any, total: 
         skew_x, skew_y = buffer[4, first:last], buffer[5, first:last]
         xx = xy = xz = yy = yz = one - one
         for i in range(last - first):
-            a, b, c, d, e = _line(
+            a, b, c, d, e = line_at(
                 bx[i] - x, by[i] - y, bz[i] - z, area[i], skew_x[i], skew_y[i], lift[i], one
             )
             xx += a
@@ -86,6 +63,34 @@ def sum_lines(buffer: Any, count: int, x: Any, y: Any, z: Any, one: Any, total: 
         total[3] += yy
         total[4] += yz
         total[5] -= xx + yy
+
+
+@njit(error_model="numpy", cache=True, fastmath={"reassoc", "contract"})
+def pull_lines(buffer: Any, count: int, x: Any, y: Any, z: Any, one: Any, pull: Array) -> None:
+    """Add the attraction of gathered lines seen from an offset, in one's precision."""
+    three = one + one + one
+    for first in range(0, count, _CHUNK):
+        last = min(first + _CHUNK, count)
+        bx, by, bz = buffer[0, first:last], buffer[1, first:last], buffer[2, first:last]
+        area, lift = buffer[3, first:last], buffer[6, first:last]
+        skew_x, skew_y = buffer[4, first:last], buffer[5, first:last]
+        gx = gy = gz = one - one
+        for i in range(last - first):
+            X, Y, Z = bx[i] - x, by[i] - y, bz[i] - z
+            s2 = X * X + Y * Y
+            r2 = s2 + Z * Z
+            r = np.sqrt(r2)
+            below = r + abs(Z)
+            gap = s2 / below if one - one < Z else below
+            w = one / (r2 * r)
+            g = area[i] / (r * gap)
+            along = three * (skew_x[i] * X + skew_y[i] * Y + lift[i] * Z) * w / r2
+            gx += X * g + skew_x[i] * w - along * X
+            gy += Y * g + skew_y[i] * w - along * Y
+            gz += lift[i] * w - along * Z - area[i] / r
+        pull[0] += gx
+        pull[1] += gy
+        pull[2] += gz
 
 
 @njit(error_model="numpy", cache=True)
@@ -283,7 +288,7 @@ def _fill(
             _edges(edges_x, starts, shape, level, 1),
             _edges(edges_y, starts, shape, level, 0),
             split[level],
-            starts[level, 0] if level > 0 else -1,
+            starts[level, 0],
             (w[0], w[1], w[2], w[3]),
             (w[4], w[5], w[6], w[7]),
             buffer,
@@ -307,6 +312,7 @@ def _group(
     points: Array,
     base: float,
     opening: float,
+    cuts: float,
     unit: Any,
     heights: Array,
     moments: tuple[Array, Array, Array, Array],
@@ -341,29 +347,66 @@ def _group(
     cells_x = _edges(edges_x, starts, shape, 0, 1)
     cells_y = _edges(edges_y, starts, shape, 0, 0)
     whole = (cells_x[0], cells_x[-1], cells_y[0], cells_y[-1])
+    pull = np.zeros(out.shape[1] - 6)
     for n in range(points.shape[0]):
         at = (points[n, 0], points[n, 1], points[n, 2])
         spot = (at[0], at[0], at[1], at[1])
         total = np.zeros(6)
+        pull[:] = 0.0
         window = _window(spot, opening * sizes[0], cells_x, cells_y, none)
-        i0, i1, j0, j1 = window
-        if i1 > i0 and j1 > j0:
-            columns = np.empty((7, (i1 - i0) * (j1 - j0) + LANES))
-            held = gather_columns(*at, cells_x, cells_y, heights, base, window, columns, total)
-            sum_columns(columns, held, total)
-            rim = (cells_x[i0], cells_x[i1], cells_y[j0], cells_y[j1])
-            endless_rectangle(rim, at, base, 1.0, total)
+        _near(at, window, base, cuts, cells_x, cells_y, heights, total, pull)
         held = _windows(spot, opening, (0, shared), window, end, *geometry, windows)
         near = np.empty((7, held + LANES), unit.dtype)
         held = _fill(at, (0, shared), windows, heights, moments, *flat, near)
-        sum_lines(near, held, one - one, one - one, one - one, one, total)
-        move = (at[0] - centre[0], at[1] - centre[1], at[2] - centre[2])
+        _lines(near, held, *_in(unit, (0.0, 0.0, 0.0)), one, total, pull)
         if count > 0:
-            offset = (move[0] * one, move[1] * one, move[2] * one)
-            sum_lines(far, count, *_in(unit, offset), one, total)
+            move = _in(unit, (at[0] - centre[0], at[1] - centre[1], at[2] - centre[2]))
+            _lines(far, count, *move, one, total, pull)
         endless_rectangle(whole, at, base, -1.0, total)
-        for c in range(6):
-            out[n, c] = total[c]
+        if pull.shape[0]:
+            pull_endless(whole, at, base, -1.0, pull)
+        out[n, :6] = total
+        out[n, 6:] = pull
+
+
+@njit(error_model="numpy", cache=True)
+def _lines(
+    buffer: Any, count: int, x: Any, y: Any, z: Any, one: Any, total: Array, pull: Array
+) -> None:
+    """Add gathered lines to the tensor and, where it is asked for, to the attraction."""
+    sum_lines(buffer, count, x, y, z, one, total)
+    if pull.shape[0]:
+        pull_lines(buffer, count, x, y, z, one, pull)
+
+
+@njit(error_model="numpy", cache=True)
+def _near(
+    at: tuple[float, float, float],
+    window: tuple[int, int, int, int],
+    base: float,
+    cuts: float,
+    edges_x: Array,
+    edges_y: Array,
+    heights: Array,
+    total: Array,
+    pull: Array,
+) -> None:
+    """Add the columns of a window exactly, and what else lies below the base there."""
+    i0, i1, j0, j1 = window
+    if i1 <= i0 or j1 <= j0:
+        return
+    buffer = np.empty((7, (i1 - i0) * (j1 - j0) + LANES))
+    held = gather_columns(
+        at[0], at[1], at[2], edges_x, edges_y, heights, base, window, buffer, total, pull
+    )
+    sum_columns(buffer, held, total)
+    rim = (edges_x[i0], edges_x[i1], edges_y[j0], edges_y[j1])
+    endless_rectangle(rim, at, base, 1.0, total)
+    if pull.shape[0]:
+        pull_columns(buffer, held, pull)
+        pull_endless(rim, at, base, 1.0, pull)
+    if cuts > 0.0:
+        bend_columns(at, edges_x, edges_y, heights, window, cuts, total, pull)
 
 
 @njit(inline="always", error_model="numpy", cache=True)
@@ -380,6 +423,7 @@ def pyramid_sums(
     groups: Index,
     base: float,
     opening: float,
+    cuts: float,
     unit: Any,
     heights: Array,
     moments: tuple[Array, Array, Array, Array],
@@ -391,12 +435,14 @@ def pyramid_sums(
     edges_y: Array,
     out: Array,
 ) -> None:
-    """Fill (n, 6) sums per unit G ρ of grouped stations over a pyramid.
+    """Fill (n, 6) tensors, or (n, 9) with the attraction behind, per unit G ρ.
 
     Columns within ``opening`` cell sizes are exact; blocks of level l serve from ``opening`` of
-    their sizes outward, to where the next level takes over. Group g are the stations from
-    ``groups[g]`` to ``groups[g + 1]``. ``unit`` is [1] in the precision of the far field. One
-    thread sums one group, so that the result does not depend on the number of threads.
+    their sizes outward, to where the next level takes over. ``cuts`` above zero bends the near
+    tops into the bilinear surface (``bend_columns``), which the pyramid must then hold too.
+    Group g are the stations from ``groups[g]`` to ``groups[g + 1]``. ``unit`` is [1] in the
+    precision of the far field. One thread sums one group, so that the result does not depend on
+    the number of threads.
     """
     for g in prange(groups.shape[0] - 1):
         first, last = groups[g], groups[g + 1]
@@ -404,6 +450,7 @@ def pyramid_sums(
             points[first:last],
             base,
             opening,
+            cuts,
             unit,
             heights,
             moments,
@@ -419,27 +466,29 @@ def pyramid_sums(
 
 @njit(parallel=True, error_model="numpy", cache=True)
 def exact_sums(
-    points: Array, edges_x: Array, edges_y: Array, heights: Array, base: float, out: Array
+    points: Array,
+    edges_x: Array,
+    edges_y: Array,
+    heights: Array,
+    base: float,
+    cuts: float,
+    out: Array,
 ) -> None:
-    """Fill (n, 6) sums per unit G ρ over every column, all exact."""
+    """Fill (n, 6) tensors, or (n, 9), per unit G ρ over every column, all exact."""
     columns = heights.shape[1]
     for n in prange(points.shape[0]):
-        total = np.zeros(6)
+        at = (points[n, 0], points[n, 1], points[n, 2])
+        total, pull = np.zeros(6), np.zeros(out.shape[1] - 6)
         buffer = np.empty((7, columns + LANES))
         for j in range(heights.shape[0]):
             window = (0, columns, j, j + 1)
             held = gather_columns(
-                points[n, 0],
-                points[n, 1],
-                points[n, 2],
-                edges_x,
-                edges_y,
-                heights,
-                base,
-                window,
-                buffer,
-                total,
+                at[0], at[1], at[2], edges_x, edges_y, heights, base, window, buffer, total, pull
             )
             sum_columns(buffer, held, total)
-        for c in range(6):
-            out[n, c] = total[c]
+            if pull.shape[0]:
+                pull_columns(buffer, held, pull)
+            if cuts > 0.0:
+                bend_columns(at, edges_x, edges_y, heights, window, cuts, total, pull)
+        out[n, :6] = total
+        out[n, 6:] = pull

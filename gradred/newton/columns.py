@@ -7,18 +7,59 @@ buffers, one row per quantity, so that one long loop runs over them whatever the
 from __future__ import annotations
 
 import math
+from typing import Any
 
 import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
-from gradred.newton.prism import middle_tensor, near_tensor
+from gradred.newton.prism import (
+    attraction_at,
+    face_integral,
+    middle_tensor,
+    near_tensor,
+    tensor_at,
+)
+from gradred.newton.pyramid import surface_at
 
 Array = NDArray[np.float64]
 
 _TOUCHING = 1e-3
+_REFINED = 8.0
 LANES = 8
 """Buffers are filled up to a multiple of this, so that no loop has a remainder."""
+
+
+@njit(inline="never", forceinline=True, error_model="numpy", cache=True)
+def line_at(
+    x: Any, y: Any, z: Any, area: Any, skew_x: Any, skew_y: Any, lift: Any, one: Any
+) -> tuple[Any, Any, Any, Any, Any]:
+    """Return xx, xy, xz, yy, yz of a line of mass and the dipole at its top, in one's precision."""
+    two = one + one
+    three = two + one
+    s2 = x * x + y * y
+    r2 = s2 + z * z
+    r = np.sqrt(r2)
+    # R - Z loses its digits under a summit far above: s²/(R + Z) is the same number
+    below = r + abs(z)
+    gap = below if z <= one - one else s2 / below
+    inverse = one / (r2 * gap)
+    u = gap * inverse  # 1/R²
+    g = r * inverse
+    w = r * u * u  # 1/R³
+    k = g * g * (two - z * r * u)
+    along = skew_x * x + skew_y * y + lift * z
+    p5 = three * w * u
+    p7 = (three + two) * p5 * u * along
+    curl = area * k - p7
+    even = p5 * along - area * g
+    wide = area * w
+    xx = curl * x * x + even + two * p5 * skew_x * x
+    yy = curl * y * y + even + two * p5 * skew_y * y
+    xy = curl * x * y + p5 * (skew_x * y + skew_y * x)
+    xz = p5 * (skew_x * z + lift * x) - (p7 * z + wide) * x
+    yz = p5 * (skew_y * z + lift * y) - (p7 * z + wide) * y
+    return xx, xy, xz, yy, yz
 
 
 @njit(error_model="numpy", cache=True)
@@ -33,11 +74,12 @@ def gather_columns(
     window: tuple[int, int, int, int],
     buffer: Array,
     total: Array,
+    pull: Array,
 ) -> int:
     """Fill (7, n) sides and signs of the columns of a window; return n, a multiple of ``LANES``.
 
     A column that the station touches or stands in is added to ``total`` at once, by the form that
-    holds there.
+    holds there, and to ``pull`` where that has room.
     """
     i0, i1, j0, j1 = window
     n = 0
@@ -57,6 +99,11 @@ def gather_columns(
                     part = near_tensor(x1, x2, y1, y2, low, high)
                     for c in range(6):
                         total[c] += sign * part[c]
+                    if pull.shape[0]:
+                        a, b, g, _ = attraction_at(x1, x2, y1, y2, low, high)
+                        pull[0] += sign * a
+                        pull[1] += sign * b
+                        pull[2] += sign * g
                 continue
             buffer[0, n], buffer[1, n] = x1, x2
             buffer[2, n], buffer[3, n] = y1, y2
@@ -90,6 +137,111 @@ def sum_columns(buffer: Array, count: int, total: Array) -> None:
     total[3] += yy
     total[4] += yz
     total[5] -= xx + yy
+
+
+@njit(error_model="numpy", cache=True)
+def pull_columns(buffer: Array, count: int, pull: Array) -> None:
+    """Add the attraction, x, y and z, of gathered columns."""
+    for i in range(count):
+        if buffer[6, i] != 0.0:
+            a, b, c, _ = attraction_at(
+                buffer[0, i], buffer[1, i], buffer[2, i], buffer[3, i], buffer[4, i], buffer[5, i]
+            )
+            pull[0] += buffer[6, i] * a
+            pull[1] += buffer[6, i] * b
+            pull[2] += buffer[6, i] * c
+
+
+@njit(error_model="numpy", cache=True)
+def _tilt(
+    heights: Array,
+    edges_x: Array,
+    edges_y: Array,
+    i: int,
+    j: int,
+    at: tuple[float, float, float],
+    x1: float,
+    y1: float,
+    dx: float,
+    dy: float,
+) -> tuple[float, float, float]:
+    """Return the moments of a tilted piece: area × height along x and y, half its spread."""
+    x, y = x1 + at[0], y1 + at[1]
+    middle_x, middle_y = x + 0.5 * dx, y + 0.5 * dy
+    east = surface_at(heights, edges_x, edges_y, i, j, x + dx, middle_y)
+    west = surface_at(heights, edges_x, edges_y, i, j, x, middle_y)
+    north = surface_at(heights, edges_x, edges_y, i, j, middle_x, y + dy)
+    south = surface_at(heights, edges_x, edges_y, i, j, middle_x, y)
+    rise_x, rise_y, area = east - west, north - south, dx * dy
+    spread = area * (rise_x * rise_x + rise_y * rise_y) / 24.0
+    return area * rise_x * dx / 12.0, area * rise_y * dy / 12.0, spread
+
+
+@njit(error_model="numpy", cache=True)
+def bend_columns(
+    at: tuple[float, float, float],
+    edges_x: Array,
+    edges_y: Array,
+    heights: Array,
+    window: tuple[int, int, int, int],
+    cuts: float,
+    total: Array,
+    pull: Array,
+) -> None:
+    """Add the mass between the flat tops of a window and the bilinear surface through the centres.
+
+    A cell is cut into n × n pieces, n the even number next to ``cuts`` cell sides over its
+    distance, and to a quarter of ``cuts`` within eight sides; each piece is a thin exact prism
+    from the flat top to the surface in its middle, and a dipole that stands for its tilt.
+    """
+    i0, i1, j0, j1 = window
+    for j in range(j0, j1):
+        depth = edges_y[j + 1] - edges_y[j]
+        y = 0.5 * (edges_y[j] + edges_y[j + 1]) - at[1]
+        for i in range(i0, i1):
+            width = edges_x[i + 1] - edges_x[i]
+            x = 0.5 * (edges_x[i] + edges_x[i + 1]) - at[0]
+            z = heights[j, i] - at[2]
+            away = max(math.sqrt(x * x + y * y + z * z), 1e-3)
+            # an even number: the surface has its kinks along the middle lines of the cell
+            side = max(width, depth)
+            least = cuts / 8.0 if away < _REFINED * side else 1.0
+            n = 2 * min(max(math.ceil(max(0.5 * cuts * side / away, least)), 1), 32)
+            dx, dy = width / n, depth / n
+            for q in range(n):
+                y1 = edges_y[j] - at[1] + q * dy
+                for p in range(n):
+                    x1 = edges_x[i] - at[0] + p * dx
+                    h = surface_at(
+                        heights,
+                        edges_x,
+                        edges_y,
+                        i,
+                        j,
+                        x1 + 0.5 * dx + at[0],
+                        y1 + 0.5 * dy + at[1],
+                    )
+                    rise = h - heights[j, i]
+                    sign = 1.0 if rise > 0.0 else -1.0
+                    low, high = min(z, z + rise), max(z, z + rise)
+                    part = tensor_at(x1, x1 + dx, y1, y1 + dy, low, high)
+                    for c in range(6):
+                        total[c] += sign * part[c] if rise != 0.0 else 0.0
+                    tilt = _tilt(heights, edges_x, edges_y, i, j, at, x1, y1, dx, dy)
+                    xx, xy, xz, yy, yz = line_at(
+                        x1 + 0.5 * dx, y1 + 0.5 * dy, z + rise, 0.0, tilt[0], tilt[1], tilt[2], 1.0
+                    )
+                    total[0] += xx
+                    total[1] += xy
+                    total[2] += xz
+                    total[3] += yy
+                    total[4] += yz
+                    total[5] -= xx + yy
+                    if pull.shape[0]:
+                        a, b, g, _ = attraction_at(x1, x1 + dx, y1, y1 + dy, low, high)
+                        pull[0] += sign * a
+                        pull[1] += sign * b
+                        pull[2] += sign * g
 
 
 @njit(error_model="numpy", cache=True)
@@ -130,3 +282,34 @@ def endless_rectangle(
     _corner(x1, y2, z, -sign, total)
     _corner(x2, y1, z, -sign, total)
     _corner(x1, y1, z, sign, total)
+
+
+@njit(error_model="numpy", cache=True)
+def _wall(x: float, y1: float, y2: float, z: float) -> float:
+    """Return the integral along y of ln(R - z) at offset x, less y2 - y1: a face without end."""
+    total = 0.0
+    for y, sign in ((y1, -1.0), (y2, 1.0)):
+        r = math.sqrt(x * x + y * y + z * z)
+        s2 = max(x * x + y * y, 1e-8)
+        across = max(x * x + z * z, 1e-8)
+        up = math.log(r - z) if z <= 0.0 else math.log(s2 / (r + z))
+        along = math.log(r + y) if y > 0.0 else math.log(across / (r - y))
+        total += sign * (y * up - z * along)
+        total += sign * abs(x) * (math.atan2(y, abs(x)) + math.atan2(y * z, abs(x) * r))
+    return total
+
+
+@njit(error_model="numpy", cache=True)
+def pull_endless(
+    sides: tuple[float, float, float, float],
+    at: tuple[float, float, float],
+    height: float,
+    sign: float,
+    pull: Array,
+) -> None:
+    """Add the attraction of a rectangle of mass downward without end."""
+    x1, x2, y1, y2 = sides[0] - at[0], sides[1] - at[0], sides[2] - at[1], sides[3] - at[1]
+    z = height - at[2]
+    pull[0] += sign * (_wall(x2, y1, y2, z) - _wall(x1, y1, y2, z))
+    pull[1] += sign * (_wall(y2, x1, x2, z) - _wall(y1, x1, x2, z))
+    pull[2] -= sign * face_integral(z, x1, x2, y1, y2)

@@ -18,28 +18,16 @@ from gradred.errors import FitError, SurveyError
 from gradred.newton.blocks import exact_sums, pyramid_sums
 from gradred.newton.bodies import rows
 from gradred.newton.pyramid import Pyramid, pyramid_of
-from gradred.units import EOTVOS, G
+from gradred.units import EOTVOS, MILLIGAL, G
 
 Array = NDArray[np.float64]
-Surface = Literal["prism"]
+Surface = Literal["prism", "bilinear"]
 
-_OPENINGS: Final = (
-    1.5,
-    2.0,
-    2.5,
-    3.0,
-    4.0,
-    5.0,
-    6.0,
-    8.0,
-    10.0,
-    12.0,
-    16.0,
-    20.0,
-    24.0,
-    32.0,
-    48.0,
-)
+# fmt: off
+_OPENINGS: Final = (1.5, 2.0, 2.5, 3.0, 3.5, 4.0, 5.0, 6.0, 8.0, 10.0, 12.0, 16.0, 20.0, 24.0, 32.0)
+# fmt: on
+_CUTS: Final = (4.0, 8.0, 16.0, 32.0)
+_EXACT_CUTS: Final = 24.0
 _SAMPLE: Final = 96
 _SAFETY: Final = 2.0
 _GROUP: Final = 16
@@ -96,28 +84,39 @@ def columns_of(heights: ArrayLike, easting: ArrayLike, northing: ArrayLike, base
     return Columns(cell_edges(x, "eastings"), cell_edges(y, "northings"), field, float(base))
 
 
-def _sum(points: Array, model: Columns, pyramid: Pyramid, opening: float, unit: Any) -> Array:
-    order, groups = grouped(points)
-    out = np.empty((len(points), 6))
-    pyramid_sums(
-        points[order],
-        groups,
-        model.base,
-        opening,
-        unit,
-        pyramid.heights,
-        (pyramid.top, pyramid.skew_x, pyramid.skew_y, pyramid.spread),
-        pyramid.shape,
-        pyramid.split,
-        pyramid.starts,
-        pyramid.sizes,
-        pyramid.edges_x,
-        pyramid.edges_y,
-        out,
-    )
-    unsorted = np.empty_like(out)
-    unsorted[order] = out
-    return unsorted
+@dataclass(frozen=True)
+class _Engine:
+    """A terrain model made ready to be summed; ``cuts`` 0 stands for flat tops."""
+
+    model: Columns
+    pyramid: Pyramid
+    unit: Any
+
+    def sums(self, points: Array, opening: float, cuts: float, width: int = 6) -> Array:
+        """Return (n, width) sums per unit G ρ: the tensor, and the attraction for a width of 9."""
+        order, groups = grouped(points)
+        out = np.empty((len(points), width))
+        pyramid = self.pyramid
+        pyramid_sums(
+            points[order],
+            groups,
+            self.model.base,
+            opening,
+            cuts,
+            self.unit,
+            pyramid.heights,
+            (pyramid.top, pyramid.skew_x, pyramid.skew_y, pyramid.spread),
+            pyramid.shape,
+            pyramid.split,
+            pyramid.starts,
+            pyramid.sizes,
+            pyramid.edges_x,
+            pyramid.edges_y,
+            out,
+        )
+        unsorted = np.empty_like(out)
+        unsorted[order] = out
+        return unsorted
 
 
 def grouped(points: Array) -> tuple[NDArray[np.intp], NDArray[np.int64]]:
@@ -159,22 +158,50 @@ def _sample(points: Array, model: Columns) -> Array:
     return np.asarray(points[np.unique(np.concatenate([even, low]))])
 
 
-def _opening(points: Array, model: Columns, pyramid: Pyramid, tolerance: float, unit: Any) -> float:
+def _cuts(sample: Array, engine: _Engine, tolerance: float) -> float:
+    """Return into how many pieces near cells must be cut for the bilinear surface."""
+    for cuts in _CUTS:
+        rough, fine = (engine.sums(sample, 4.0, c) for c in (cuts, 4.0 * cuts))
+        # pieces' errors fall with the fourth power of their number, so that four times as many
+        # stand for the truth
+        if 1.5 * np.abs(rough - fine).max() <= tolerance:
+            return cuts
+    raise _beyond(tolerance)
+
+
+def _opening(sample: Array, engine: _Engine, cuts: float, tolerance: float) -> float:
     """Return the smallest opening whose sums on the sample agree with those of twice the opening.
 
-    Blocks' errors fall with the fourth power of the opening or faster, so that the doubled one
+    Blocks' errors fall with the third power of the opening or faster, so that the doubled one
     stands for the truth; the tolerance is asked for with a factor of two to spare.
     """
-    sample = _sample(points, model)
     for opening in _OPENINGS:
-        rough, fine = (_sum(sample, model, pyramid, o, unit) for o in (opening, 2.0 * opening))
+        rough, fine = (engine.sums(sample, o, cuts) for o in (opening, 2.0 * opening))
         if _SAFETY * np.abs(rough - fine).max() <= tolerance:
             return opening
-    raise FitError(
-        f"a tolerance of {tolerance * EOTVOS / G:g} E kg/m3 is below what blocks can give",
+    raise _beyond(tolerance)
+
+
+def _beyond(tolerance: float) -> FitError:
+    return FitError(
+        f"a tolerance of {tolerance * G * 2670.0 / EOTVOS:.2g} E at 2670 kg/m3 is below what "
+        "blocks can give here",
         where="terrain sum",
         cure="ask for a larger tolerance, or use exact_terrain_tensor",
     )
+
+
+def _summed(points: Array, model: Columns, tolerance: float, surface: Surface, width: int) -> Array:
+    """Return (n, width) sums per unit G ρ to a tolerance of the tensor per unit G ρ."""
+    bilinear = surface == "bilinear"
+    pyramid = pyramid_of(model.edges_x, model.edges_y, model.heights, bilinear=bilinear)
+    unit = _SINGLE if tolerance >= _FLOOR * EOTVOS / (G * 2670.0) else _DOUBLE
+    engine = _Engine(model, pyramid, unit)
+    sample = _sample(points, model)
+    cuts = _cuts(sample, engine, tolerance / 3.0) if bilinear else 0.0
+    share = 2.0 / 3.0 if bilinear else 1.0
+    opening = _opening(sample, engine, cuts, share * tolerance)
+    return engine.sums(points, opening, cuts, width)
 
 
 def terrain_tensor(
@@ -213,7 +240,9 @@ def terrain_tensor(
     tolerance : float
         Largest error against the exact sum over all cells, E, in any component.
     surface : str
-        "prism": flat-topped cells.
+        "prism": flat-topped cells; "bilinear": the surface that is bilinear between the cell
+        centres, and level beyond the outermost. The two differ by 0.5 E at 25 m cells and 80 m
+        clearance.
 
     Returns
     -------
@@ -234,21 +263,78 @@ def terrain_tensor(
     ----------
     ``tests/newton/test_heightfield.py`` against exact sums over real terrain and closed forms.
     """
+    return _terrain(points, heights, easting, northing, density, base, tolerance, surface, width=6)
+
+
+def _terrain(
+    points: ArrayLike,
+    heights: ArrayLike,
+    easting: ArrayLike,
+    northing: ArrayLike,
+    density: float,
+    base: float,
+    tolerance: float,
+    surface: Surface,
+    *,
+    width: int,
+) -> Array:
     model, where = columns_of(heights, easting, northing, base), rows(points, 3, "points")
-    if tolerance <= 0.0 or surface != "prism":
+    if tolerance <= 0.0 or surface not in ("prism", "bilinear"):
         raise SurveyError(
             f"tolerance {tolerance:g} E and surface {surface!r} cannot be served",
             where="terrain sum",
-            cure="give a positive tolerance, and the surface 'prism'",
+            cure="give a positive tolerance, and the surface 'prism' or 'bilinear'",
         )
     if density == 0.0 or len(where) == 0:
-        return np.zeros((len(where), 6))
-    scale = G * density / EOTVOS
-    pyramid = pyramid_of(model.edges_x, model.edges_y, model.heights)
-    asked = tolerance / abs(scale)
-    unit = _SINGLE if asked >= _FLOOR * EOTVOS / (G * 2670.0) else _DOUBLE
-    opening = _opening(where, model, pyramid, asked, unit)
-    return scale * _sum(where, model, pyramid, opening, unit)
+        return np.zeros((len(where), width))
+    out = _summed(where, model, tolerance * EOTVOS / (G * abs(density)), surface, width)
+    out[:, :6] *= G * density / EOTVOS
+    out[:, 6:] *= G * density / MILLIGAL
+    return out
+
+
+def terrain_attraction(
+    points: ArrayLike,
+    heights: ArrayLike,
+    easting: ArrayLike,
+    northing: ArrayLike,
+    *,
+    density: float,
+    base: float,
+    tolerance: float,
+    surface: Surface = "prism",
+) -> tuple[Array, Array]:
+    """Return tensor (n, 6) in E and gravity (n, 3) in mGal, ``grid`` frame, in one pass.
+
+    Arguments as ``terrain_tensor``; the tolerance is that of the tensor; gravity is then good to
+    some 0.1 mGal per E of it (measured: 0.004 mGal at 0.05 E).
+    """
+    out = _terrain(points, heights, easting, northing, density, base, tolerance, surface, width=9)
+    return out[:, :6], out[:, 6:]
+
+
+def terrain_gravity(
+    points: ArrayLike,
+    heights: ArrayLike,
+    easting: ArrayLike,
+    northing: ArrayLike,
+    *,
+    density: float,
+    base: float,
+    tolerance: float,
+    surface: Surface = "prism",
+) -> Array:
+    """Return the gravity of a terrain model, (n, 3) mGal; arguments as ``terrain_attraction``."""
+    return terrain_attraction(
+        points,
+        heights,
+        easting,
+        northing,
+        density=density,
+        base=base,
+        tolerance=tolerance,
+        surface=surface,
+    )[1]
 
 
 def exact_terrain_tensor(
@@ -259,14 +345,24 @@ def exact_terrain_tensor(
     *,
     density: float,
     base: float,
+    surface: Surface = "prism",
 ) -> Array:
     """Return the tensor of a terrain model, ``grid`` frame, (n, 6) E, by exact prisms throughout.
 
-    Arguments as ``terrain_tensor``; 1e-10 of the largest column, at the cost of all pairs.
+    Arguments as ``terrain_tensor``; 1e-10 of the largest column for flat tops, at the cost of all
+    pairs. The bilinear surface is made of pieces of a cell's side over 24 times its distance in
+    sides, two along each axis at least: good to 1e-3 E where no piece is touched.
     """
     model, where = columns_of(heights, easting, northing, base), rows(points, 3, "points")
+    cuts = _EXACT_CUTS if surface == "bilinear" else 0.0
     out = np.empty((len(where), 6))
     exact_sums(
-        np.ascontiguousarray(where), model.edges_x, model.edges_y, model.heights, model.base, out
+        np.ascontiguousarray(where),
+        model.edges_x,
+        model.edges_y,
+        model.heights,
+        model.base,
+        cuts,
+        out,
     )
     return G * density / EOTVOS * out

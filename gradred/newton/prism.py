@@ -347,6 +347,12 @@ def _sheet(x: float, y1: float, y2: float, z1: float, z2: float, least: float) -
 
 
 @njit(error_model="numpy", cache=True)
+def face_integral(x: float, y1: float, y2: float, z1: float, z2: float) -> float:
+    """Return the integral of 1/r over a rectangle at offset x, in the form that holds anywhere."""
+    return _sheet(x, y1, y2, z1, z2, _EDGE * max(y2 - y1, z2 - z1))
+
+
+@njit(error_model="numpy", cache=True)
 def attraction_at(
     x1: float, x2: float, y1: float, y2: float, z1: float, z2: float
 ) -> tuple[float, float, float, float]:
