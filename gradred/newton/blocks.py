@@ -24,10 +24,12 @@ from numpy.typing import NDArray
 
 from gradred.newton.columns import (
     LANES,
-    bend_columns,
+    count_bend,
     endless_rectangle,
+    gather_bend,
     gather_columns,
     line_at,
+    padded,
     pull_columns,
     pull_endless,
     sum_columns,
@@ -198,17 +200,6 @@ def _gather_ring(
 
 
 @njit(error_model="numpy", cache=True)
-def _padded(buffer: Any, n: int) -> int:
-    """Fill the buffer with lines of no mass up to a whole number of lanes."""
-    while n % LANES:
-        for c in range(7):
-            buffer[c, n] = 0.0
-        buffer[0, n] = buffer[2, n] = -1e6
-        n += 1
-    return n
-
-
-@njit(error_model="numpy", cache=True)
 def _edges(edges: Array, starts: Index, shape: Index, level: int, axis: int) -> Array:
     """Return the edges of a level along x (axis 1) or y (axis 0)."""
     first = starts[level, 2 - axis]
@@ -294,7 +285,7 @@ def _fill(
             buffer,
             n,
         )
-    return _padded(buffer, n)
+    return padded(buffer, n)
 
 
 @njit(error_model="numpy", cache=True)
@@ -406,7 +397,25 @@ def _near(
         pull_columns(buffer, held, pull)
         pull_endless(rim, at, base, 1.0, pull)
     if cuts > 0.0:
-        bend_columns(at, edges_x, edges_y, heights, window, cuts, total, pull)
+        _bend(at, edges_x, edges_y, heights, window, cuts, total, pull)
+
+
+@njit(error_model="numpy", cache=True)
+def _bend(
+    at: tuple[float, float, float],
+    edges_x: Array,
+    edges_y: Array,
+    heights: Array,
+    window: tuple[int, int, int, int],
+    cuts: float,
+    total: Array,
+    pull: Array,
+) -> None:
+    """Turn the flat tops of a window into the bilinear surface."""
+    room = count_bend(at, edges_x, edges_y, heights, window, cuts)
+    buffer = np.empty((7, room))
+    held = gather_bend(at, edges_x, edges_y, heights, window, cuts, buffer)
+    _lines(buffer, held, 0.0, 0.0, 0.0, 1.0, total, pull)
 
 
 @njit(inline="always", error_model="numpy", cache=True)
@@ -439,7 +448,7 @@ def pyramid_sums(
 
     Columns within ``opening`` cell sizes are exact; blocks of level l serve from ``opening`` of
     their sizes outward, to where the next level takes over. ``cuts`` above zero bends the near
-    tops into the bilinear surface (``bend_columns``), which the pyramid must then hold too.
+    tops into the bilinear surface (``gather_bend``), which the pyramid must then hold too.
     Group g are the stations from ``groups[g]`` to ``groups[g + 1]``. ``unit`` is [1] in the
     precision of the far field. One thread sums one group, so that the result does not depend on
     the number of threads.
@@ -489,6 +498,6 @@ def exact_sums(
             if pull.shape[0]:
                 pull_columns(buffer, held, pull)
             if cuts > 0.0:
-                bend_columns(at, edges_x, edges_y, heights, window, cuts, total, pull)
+                _bend(at, edges_x, edges_y, heights, window, cuts, total, pull)
         out[n, :6] = total
         out[n, 6:] = pull

@@ -18,7 +18,6 @@ from gradred.newton.prism import (
     face_integral,
     middle_tensor,
     near_tensor,
-    tensor_at,
 )
 from gradred.newton.pyramid import surface_at
 
@@ -153,95 +152,113 @@ def pull_columns(buffer: Array, count: int, pull: Array) -> None:
 
 
 @njit(error_model="numpy", cache=True)
-def _tilt(
-    heights: Array,
+def _pieces(
+    at: tuple[float, float, float],
     edges_x: Array,
     edges_y: Array,
+    heights: Array,
     i: int,
     j: int,
-    at: tuple[float, float, float],
-    x1: float,
-    y1: float,
-    dx: float,
-    dy: float,
-) -> tuple[float, float, float]:
-    """Return the moments of a tilted piece: area × height along x and y, half its spread."""
-    x, y = x1 + at[0], y1 + at[1]
-    middle_x, middle_y = x + 0.5 * dx, y + 0.5 * dy
-    east = surface_at(heights, edges_x, edges_y, i, j, x + dx, middle_y)
-    west = surface_at(heights, edges_x, edges_y, i, j, x, middle_y)
-    north = surface_at(heights, edges_x, edges_y, i, j, middle_x, y + dy)
-    south = surface_at(heights, edges_x, edges_y, i, j, middle_x, y)
-    rise_x, rise_y, area = east - west, north - south, dx * dy
-    spread = area * (rise_x * rise_x + rise_y * rise_y) / 24.0
-    return area * rise_x * dx / 12.0, area * rise_y * dy / 12.0, spread
+    cuts: float,
+) -> int:
+    """Return into how many pieces along each axis a cell is cut: an even number.
+
+    ``cuts`` sides over the distance of the nearest part of its surface, and a quarter of ``cuts``
+    within eight sides. Even, because the surface has its kinks along the middle lines of the cell.
+    """
+    x1, x2, y1, y2 = edges_x[i], edges_x[i + 1], edges_y[j], edges_y[j + 1]
+    side = max(x2 - x1, y2 - y1)
+    low = high = heights[j, i]
+    for corner in range(4):
+        h = surface_at(
+            heights, edges_x, edges_y, i, j, x1 if corner % 2 else x2, y1 if corner > 1 else y2
+        )
+        low, high = min(low, h), max(high, h)
+    dx = max(max(x1 - at[0], at[0] - x2), 0.0)
+    dy = max(max(y1 - at[1], at[1] - y2), 0.0)
+    dz = max(max(low - at[2], at[2] - high), 0.0)
+    away = max(math.sqrt(dx * dx + dy * dy + dz * dz), side / 32.0)
+    least = cuts / 8.0 if away < _REFINED * side else 1.0
+    return int(2 * min(max(math.ceil(max(0.5 * cuts * side / away, least)), 1), 32))
 
 
 @njit(error_model="numpy", cache=True)
-def bend_columns(
+def count_bend(
     at: tuple[float, float, float],
     edges_x: Array,
     edges_y: Array,
     heights: Array,
     window: tuple[int, int, int, int],
     cuts: float,
-    total: Array,
-    pull: Array,
-) -> None:
-    """Add the mass between the flat tops of a window and the bilinear surface through the centres.
+) -> int:
+    """Return how many lines ``gather_bend`` makes of a window, at most."""
+    i0, i1, j0, j1 = window
+    total = LANES
+    for j in range(j0, j1):
+        for i in range(i0, i1):
+            n = _pieces(at, edges_x, edges_y, heights, i, j, cuts)
+            total += 2 * n * n
+    return total
 
-    A cell is cut into n × n pieces, n the even number next to ``cuts`` cell sides over its
-    distance, and to a quarter of ``cuts`` within eight sides; each piece is a thin exact prism
-    from the flat top to the surface in its middle, and a dipole that stands for its tilt.
+
+@njit(error_model="numpy", cache=True)
+def gather_bend(
+    at: tuple[float, float, float],
+    edges_x: Array,
+    edges_y: Array,
+    heights: Array,
+    window: tuple[int, int, int, int],
+    cuts: float,
+    buffer: Array,
+) -> int:
+    """Fill lines that turn the flat tops of a window into the bilinear surface; return how many.
+
+    A cell is cut into n × n pieces as ``_pieces`` says. Each piece adds a line of mass up to
+    the surface in its middle, with the moments of its tilt and width, and takes away the line of
+    the flat top.
     """
     i0, i1, j0, j1 = window
+    count = 0
     for j in range(j0, j1):
         depth = edges_y[j + 1] - edges_y[j]
-        y = 0.5 * (edges_y[j] + edges_y[j + 1]) - at[1]
         for i in range(i0, i1):
             width = edges_x[i + 1] - edges_x[i]
-            x = 0.5 * (edges_x[i] + edges_x[i + 1]) - at[0]
             z = heights[j, i] - at[2]
-            away = max(math.sqrt(x * x + y * y + z * z), 1e-3)
-            # an even number: the surface has its kinks along the middle lines of the cell
-            side = max(width, depth)
-            least = cuts / 8.0 if away < _REFINED * side else 1.0
-            n = 2 * min(max(math.ceil(max(0.5 * cuts * side / away, least)), 1), 32)
+            n = _pieces(at, edges_x, edges_y, heights, i, j, cuts)
             dx, dy = width / n, depth / n
+            area = dx * dy
+            short = (dx * dx + dy * dy) / 48.0
             for q in range(n):
-                y1 = edges_y[j] - at[1] + q * dy
+                my = edges_y[j] + (q + 0.5) * dy
                 for p in range(n):
-                    x1 = edges_x[i] - at[0] + p * dx
-                    h = surface_at(
-                        heights,
-                        edges_x,
-                        edges_y,
-                        i,
-                        j,
-                        x1 + 0.5 * dx + at[0],
-                        y1 + 0.5 * dy + at[1],
-                    )
-                    rise = h - heights[j, i]
-                    sign = 1.0 if rise > 0.0 else -1.0
-                    low, high = min(z, z + rise), max(z, z + rise)
-                    part = tensor_at(x1, x1 + dx, y1, y1 + dy, low, high)
-                    for c in range(6):
-                        total[c] += sign * part[c] if rise != 0.0 else 0.0
-                    tilt = _tilt(heights, edges_x, edges_y, i, j, at, x1, y1, dx, dy)
-                    xx, xy, xz, yy, yz = line_at(
-                        x1 + 0.5 * dx, y1 + 0.5 * dy, z + rise, 0.0, tilt[0], tilt[1], tilt[2], 1.0
-                    )
-                    total[0] += xx
-                    total[1] += xy
-                    total[2] += xz
-                    total[3] += yy
-                    total[4] += yz
-                    total[5] -= xx + yy
-                    if pull.shape[0]:
-                        a, b, g, _ = attraction_at(x1, x1 + dx, y1, y1 + dy, low, high)
-                        pull[0] += sign * a
-                        pull[1] += sign * b
-                        pull[2] += sign * g
+                    mx = edges_x[i] + (p + 0.5) * dx
+                    # bilinear within the piece: its middle and its slopes from two pairs of sides
+                    east = surface_at(heights, edges_x, edges_y, i, j, mx + 0.5 * dx, my)
+                    west = surface_at(heights, edges_x, edges_y, i, j, mx - 0.5 * dx, my)
+                    north = surface_at(heights, edges_x, edges_y, i, j, mx, my + 0.5 * dy)
+                    south = surface_at(heights, edges_x, edges_y, i, j, mx, my - 0.5 * dy)
+                    spread = area * ((east - west) ** 2 + (north - south) ** 2) / 24.0
+                    for c in range(count, count + 2):
+                        buffer[0, c], buffer[1, c] = mx - at[0], my - at[1]
+                    buffer[2, count], buffer[2, count + 1] = 0.5 * (east + west) - at[2], z
+                    buffer[3, count], buffer[3, count + 1] = area, -area
+                    buffer[4, count] = area * (east - west) * dx / 12.0
+                    buffer[5, count] = area * (north - south) * dy / 12.0
+                    buffer[4, count + 1] = buffer[5, count + 1] = 0.0
+                    buffer[6, count], buffer[6, count + 1] = spread - area * short, area * short
+                    count += 2
+    return padded(buffer, count)
+
+
+@njit(error_model="numpy", cache=True)
+def padded(buffer: Any, n: int) -> int:
+    """Fill a buffer of lines with lines of no mass up to a whole number of lanes."""
+    while n % LANES:
+        for c in range(7):
+            buffer[c, n] = 0.0
+        buffer[0, n] = buffer[2, n] = -1e6
+        n += 1
+    return n
 
 
 @njit(error_model="numpy", cache=True)
