@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import textwrap
 from pathlib import Path
 from typing import Any, Final
 
@@ -59,7 +60,7 @@ def map_sheet(
 ) -> Figure:
     """Return the figure of one map with frame, scale, north, colours, resolution and noise."""
     ground = ground_of(grid)
-    figure = Figure(figsize=(7.2, 6.6), layout="constrained", facecolor="white")
+    figure = Figure(figsize=_size(ground), layout="constrained", facecolor="white")
     axes = figure.subplots()
     field = values.to_numpy()
     limits = limits_of(name, field)
@@ -67,15 +68,26 @@ def map_sheet(
     if settings.contours:
         _contours(axes, values, limits, settings.contours)
     if settings.flight_path and lines is not None:
-        axes.plot(lines["easting"] / 1e3, lines["northing"] / 1e3, ",", color=INK, alpha=0.4)
+        axes.plot(
+            lines["easting"] / 1e3, lines["northing"] / 1e3, ".", color=INK, ms=0.7, alpha=0.6
+        )
     draw_frame(axes, ground)
     draw_scale(axes, ground)
     colour_bar(figure, axes, image, unit_of(values))
     figure.suptitle(
         f"{title_of(name)}  ·  {settings.survey_name}", fontsize=11, color=INK, x=0.02, ha="left"
     )
-    figure.supxlabel(_foot(grid, name, ground), fontsize=6, color=FAINT, x=0.02, ha="left")
+    wide = int(18 * figure.get_figwidth())
+    foot = "\n".join(textwrap.fill(line, wide) for line in _foot(grid, name, ground).split("\n"))
+    figure.supxlabel(foot, fontsize=6, color=FAINT, x=0.02, ha="left")
     return figure
+
+
+def _size(ground: Ground) -> tuple[float, float]:
+    """Return width and height in inches that leave a map of any shape little white."""
+    shape = (ground.east - ground.west) / (ground.north - ground.south)
+    across = float(np.clip(5.4 * shape, 3.2, 7.0))
+    return across + 1.8, float(np.clip(across / shape, 2.5, 9.0)) + 1.2
 
 
 def _contours(axes: Any, values: xr.DataArray, limits: tuple[float, float], count: int) -> None:
