@@ -1,16 +1,10 @@
 """Compiled sums over blocks of columns, and the walk through the pyramid that picks them.
 
 A block is taken as one vertical line of mass from its mean height downward without end; what lies
-below the base is taken away again as one exact rectangle. With r = (X, Y, Z) from the station to
-the top of the line, per unit G ρ and area,
-
-    Γ_zz = -Z/R³,  Γ_xz = -X/R³,  Γ_xx = X² k - g,  Γ_xy = X Y k,
-    g = 1 / (R (R - Z)),  k = g² (2 - Z/R)
-
-which follows by integrating the tensor of a point along z. The rest of the block's shape acts as a
-dipole at the top: heights against position, the spread of heights, and the width of the block
-(whose second horizontal derivatives are, for a harmonic function, the vertical one reversed).
-Stations that are neighbours share the blocks far from all of them.
+below the base is taken away again as one exact rectangle. The rest of the block's shape acts as a
+dipole at the top of the line: heights against position, the spread of heights, and the width of
+the block (whose second horizontal derivatives are, for a harmonic function, the vertical one
+reversed). Stations that are neighbours share the blocks far from all of them.
 """
 
 from __future__ import annotations
@@ -23,76 +17,18 @@ from numba import njit, prange
 from numpy.typing import NDArray
 
 from gradred.newton.columns import (
-    LANES,
     count_bend,
     endless_rectangle,
     gather_bend,
     gather_columns,
-    line_at,
-    padded,
     pull_columns,
     pull_endless,
     sum_columns,
 )
+from gradred.newton.lines import LANES, padded, pull_lines, sum_lines
 
 Array = NDArray[np.float64]
 Index = NDArray[np.int64]
-
-_CHUNK = 256
-
-
-@njit(error_model="numpy", cache=True, fastmath={"reassoc", "contract"})
-def sum_lines(buffer: Any, count: int, x: Any, y: Any, z: Any, one: Any, total: Array) -> None:
-    """Add the tensor of gathered lines seen from an offset, summed in chunks in one's precision."""
-    for first in range(0, count, _CHUNK):
-        last = min(first + _CHUNK, count)
-        bx, by, bz = buffer[0, first:last], buffer[1, first:last], buffer[2, first:last]
-        area, lift = buffer[3, first:last], buffer[6, first:last]
-        skew_x, skew_y = buffer[4, first:last], buffer[5, first:last]
-        xx = xy = xz = yy = yz = one - one
-        for i in range(last - first):
-            a, b, c, d, e = line_at(
-                bx[i] - x, by[i] - y, bz[i] - z, area[i], skew_x[i], skew_y[i], lift[i], one
-            )
-            xx += a
-            xy += b
-            xz += c
-            yy += d
-            yz += e
-        total[0] += xx
-        total[1] += xy
-        total[2] += xz
-        total[3] += yy
-        total[4] += yz
-        total[5] -= xx + yy
-
-
-@njit(error_model="numpy", cache=True, fastmath={"reassoc", "contract"})
-def pull_lines(buffer: Any, count: int, x: Any, y: Any, z: Any, one: Any, pull: Array) -> None:
-    """Add the attraction of gathered lines seen from an offset, in one's precision."""
-    three = one + one + one
-    for first in range(0, count, _CHUNK):
-        last = min(first + _CHUNK, count)
-        bx, by, bz = buffer[0, first:last], buffer[1, first:last], buffer[2, first:last]
-        area, lift = buffer[3, first:last], buffer[6, first:last]
-        skew_x, skew_y = buffer[4, first:last], buffer[5, first:last]
-        gx = gy = gz = one - one
-        for i in range(last - first):
-            X, Y, Z = bx[i] - x, by[i] - y, bz[i] - z
-            s2 = X * X + Y * Y
-            r2 = s2 + Z * Z
-            r = np.sqrt(r2)
-            below = r + abs(Z)
-            gap = s2 / below if one - one < Z else below
-            w = one / (r2 * r)
-            g = area[i] / (r * gap)
-            along = three * (skew_x[i] * X + skew_y[i] * Y + lift[i] * Z) * w / r2
-            gx += X * g + skew_x[i] * w - along * X
-            gy += Y * g + skew_y[i] * w - along * Y
-            gz += lift[i] * w - along * Z - area[i] / r
-        pull[0] += gx
-        pull[1] += gy
-        pull[2] += gz
 
 
 @njit(error_model="numpy", cache=True)
@@ -136,40 +72,71 @@ def _gather(
 ) -> int:
     """Append the lines of a rectangle of blocks to the buffer, relative to a place; return n.
 
-    ``first`` is where the level begins in the moments, -1 for the cells, which have only heights.
+    ``first`` is where the level begins in the moments, -1 for flat cells, which have only heights.
+    Oblong blocks stand as two lines, set apart so that the second moments along both axes agree;
+    what both axes share then acts as a lowering of the top.
     """
     top, skew_x, skew_y, spread = moments
-    width = edges_x.shape[0] - 1
-    wide, high = split[0], split[1]
-    share = 1.0 / (wide * high)
+    c0, c1 = columns
+    count = c1 - c0
+    if count <= 0:
+        return n
+    ex = edges_x[c0 : c1 + 1]
+    pair = split[0] * split[1] == 2
+    share = 0.5 if pair else 1.0
     for j in range(rows[0], rows[1]):
         depth = edges_y[j + 1] - edges_y[j]
         by = 0.5 * (edges_y[j] + edges_y[j + 1]) - at[1]
-        for i in range(columns[0], columns[1]):
-            side = edges_x[i + 1] - edges_x[i]
-            bx = 0.5 * (edges_x[i] + edges_x[i + 1]) - at[0]
-            area = side * depth
-            if wide * high == 1:
-                apart, short = 0.0, (side * side + depth * depth) / 24.0
+        b = first + j * (edges_x.shape[0] - 1) + c0
+        for sign in range(-1 if pair else 0, 2 if pair else 1, 2):
+            part = buffer[:, n : n + count]
+            if first < 0:
+                _cells(part, heights[j, c0:c1], at[2])
             else:
-                apart = math.sqrt(abs(side * side - depth * depth) / 12.0)
-                short = min(side, depth) ** 2 / 12.0
-            ox, oy = (apart, 0.0) if wide == 2 else (0.0, apart)
-            for sign in range(-1, wide * high, 2):
-                m = sign if wide * high == 2 else 0
-                buffer[0, n], buffer[1, n] = bx + m * ox, by + m * oy
-                buffer[3, n] = share * area
-                if first < 0:
-                    buffer[2, n] = heights[j, i] - at[2]
-                    buffer[4, n] = buffer[5, n] = 0.0
-                    buffer[6, n] = -0.5 * share * area * short
-                else:
-                    b = first + j * width + i
-                    buffer[2, n] = top[b] - at[2]
-                    buffer[4, n], buffer[5, n] = share * skew_x[b], share * skew_y[b]
-                    buffer[6, n] = 0.5 * share * (spread[b] - area * short)
-                n += 1
+                _moments(
+                    part,
+                    top[b : b + count],
+                    skew_x[b : b + count],
+                    skew_y[b : b + count],
+                    spread[b : b + count],
+                    at[2],
+                    share,
+                )
+            for i in range(count):
+                side = ex[i + 1] - ex[i]
+                area = share * side * depth
+                apart, short = 0.0, (side * side + depth * depth) / 48.0
+                if pair:
+                    apart = sign * math.sqrt(abs(side * side - depth * depth) / 12.0)
+                    short = min(side, depth) ** 2 / 24.0
+                part[0, i] = 0.5 * (ex[i] + ex[i + 1]) - at[0] + (apart if split[0] == 2 else 0.0)
+                part[1, i] = by + (apart if split[1] == 2 else 0.0)
+                part[3, i] = area
+                part[6, i] -= area * short
+            n += count
     return n
+
+
+@njit(error_model="numpy", cache=True)
+def _cells(part: Any, heights: Array, z: float) -> None:
+    """Fill top and moments of flat cells."""
+    for i in range(part.shape[1]):
+        part[2, i] = heights[i] - z
+        part[4, i] = 0.0
+        part[5, i] = 0.0
+        part[6, i] = 0.0
+
+
+@njit(error_model="numpy", cache=True)
+def _moments(
+    part: Any, top: Array, skew_x: Array, skew_y: Array, spread: Array, z: float, share: float
+) -> None:
+    """Fill top and moments of blocks; the half of the spread acts as a rise of the top."""
+    for i in range(part.shape[1]):
+        part[2, i] = top[i] - z
+        part[4, i] = share * skew_x[i]
+        part[5, i] = share * skew_y[i]
+        part[6, i] = 0.5 * share * spread[i]
 
 
 @njit(error_model="numpy", cache=True)

@@ -7,12 +7,12 @@ buffers, one row per quantity, so that one long loop runs over them whatever the
 from __future__ import annotations
 
 import math
-from typing import Any
 
 import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
+from gradred.newton.lines import LANES, padded
 from gradred.newton.prism import (
     attraction_at,
     face_integral,
@@ -25,40 +25,6 @@ Array = NDArray[np.float64]
 
 _TOUCHING = 1e-3
 _REFINED = 8.0
-LANES = 8
-"""Buffers are filled up to a multiple of this, so that no loop has a remainder."""
-
-
-@njit(inline="never", forceinline=True, error_model="numpy", cache=True)
-def line_at(
-    x: Any, y: Any, z: Any, area: Any, skew_x: Any, skew_y: Any, lift: Any, one: Any
-) -> tuple[Any, Any, Any, Any, Any]:
-    """Return xx, xy, xz, yy, yz of a line of mass and the dipole at its top, in one's precision."""
-    two = one + one
-    three = two + one
-    s2 = x * x + y * y
-    r2 = s2 + z * z
-    r = np.sqrt(r2)
-    # R - Z loses its digits under a summit far above: s²/(R + Z) is the same number
-    below = r + abs(z)
-    gap = below if z <= one - one else s2 / below
-    inverse = one / (r2 * gap)
-    u = gap * inverse  # 1/R²
-    g = r * inverse
-    w = r * u * u  # 1/R³
-    k = g * g * (two - z * r * u)
-    along = skew_x * x + skew_y * y + lift * z
-    p5 = three * w * u
-    p7 = (three + two) * p5 * u * along
-    curl = area * k - p7
-    even = p5 * along - area * g
-    wide = area * w
-    xx = curl * x * x + even + two * p5 * skew_x * x
-    yy = curl * y * y + even + two * p5 * skew_y * y
-    xy = curl * x * y + p5 * (skew_x * y + skew_y * x)
-    xz = p5 * (skew_x * z + lift * x) - (p7 * z + wide) * x
-    yz = p5 * (skew_y * z + lift * y) - (p7 * z + wide) * y
-    return xx, xy, xz, yy, yz
 
 
 @njit(error_model="numpy", cache=True)
@@ -248,17 +214,6 @@ def gather_bend(
                     buffer[6, count], buffer[6, count + 1] = spread - area * short, area * short
                     count += 2
     return padded(buffer, count)
-
-
-@njit(error_model="numpy", cache=True)
-def padded(buffer: Any, n: int) -> int:
-    """Fill a buffer of lines with lines of no mass up to a whole number of lanes."""
-    while n % LANES:
-        for c in range(7):
-            buffer[c, n] = 0.0
-        buffer[0, n] = buffer[2, n] = -1e6
-        n += 1
-    return n
 
 
 @njit(error_model="numpy", cache=True)
