@@ -13,7 +13,7 @@ from matplotlib.patches import Rectangle
 from numpy.typing import NDArray
 
 from gradred import survey
-from gradred.export.sheet import FAINT, INK, draw_frame, draw_scale, ground_of
+from gradred.export.sheet import FAINT, INK, as_written, draw_frame, draw_scale, ground_of
 from gradred.export.tables import ledger_summary
 from gradred.newton.sheet import dipping_sheet
 from gradred.reduction.crossings import distance_along
@@ -80,10 +80,15 @@ def survey_map(lines: xr.Dataset, terrain: xr.Dataset | None) -> Figure:
 
 
 def _frame_of(lines: xr.Dataset) -> xr.Dataset:
-    axes = {}
-    for name in ("easting", "northing"):
-        values = lines[name].to_numpy()
-        axes[name] = np.linspace(np.nanmin(values), np.nanmax(values), 20)
+    place = np.stack([lines[name].to_numpy() for name in ("easting", "northing")])
+    low, high = np.nanmin(place, axis=1), np.nanmax(place, axis=1)
+    # a single line or station still has ground around it
+    least = max(100.0, 0.1 * float((high - low).max()))
+    margin = 0.5 * np.maximum(least - (high - low), 0.0)
+    axes = {
+        name: np.linspace(low[n] - margin[n], high[n] + margin[n], 20)
+        for n, name in enumerate(("easting", "northing"))
+    }
     return survey.new("grid", str(lines.attrs["crs"]), **axes)
 
 
@@ -96,7 +101,7 @@ def ledger_bars(lines: xr.Dataset) -> Figure:
     for rank, component in enumerate(COMPONENTS):
         rows = table[table["component"] == component].set_index("entry").loc[entries]
         place = np.arange(len(entries)) + (rank - 2.5) * 0.13
-        size = np.maximum(rows["rms_E"].to_numpy(), 1e-6)
+        size = np.fmax(rows["rms_E"].to_numpy(), 1e-6)
         axes.barh(place, size, height=0.12, color=HUES[rank], label=component)
         axes.plot(rows["sigma_rms_E"].to_numpy(), place, "|", ms=5, color="#b3261e", mew=1.2)
     axes.set_yticks(range(len(entries)), entries, fontsize=7.5)
@@ -130,12 +135,13 @@ def line_profile(lines: xr.Dataset, name: str, model: xr.Dataset | None) -> Figu
     ground = lines["terrain_height"].to_numpy()[here] if "terrain_height" in lines else None
     height = lines["height"].to_numpy()[here]
     top.plot(along, height, color=INK, lw=0.9, label="instrument")
-    if ground is not None:
+    if ground is not None and np.isfinite(ground).any():
         top.fill_between(along, np.nanmin(ground) - 10, ground, color="#c9bfa8", label="ground")
     _tidy(top, "", "height, m")
     for rank, key in enumerate(survey.removed(lines)):
         part = lines[f"removed_{key}"].to_numpy()[here, 5]
-        middle.plot(along, part - np.nanmean(part), lw=0.8, color=HUES[rank % 6], label=key)
+        mean = np.mean(part, where=np.isfinite(part)) if np.isfinite(part).any() else 0.0
+        middle.plot(along, part - mean, lw=0.8, color=HUES[rank % 6], label=key)
     middle.set_yscale("symlog", linthresh=10.0)
     _tidy(middle, "", "removed zz less\nits mean, E")
     left = lines["gradient"].to_numpy()[here, 5]
@@ -144,9 +150,10 @@ def line_profile(lines: xr.Dataset, name: str, model: xr.Dataset | None) -> Figu
         if model is not None and f"predicted_{kind}" in model:
             shown = left - model[f"residual_{kind}"].to_numpy()[here, 5]
             bottom.plot(along, shown, lw=1.2, color=hue, label=f"predicted by the {kind}")
-    _tidy(bottom, f"distance along {name}, km", "zz, E")
+    _tidy(bottom, f"distance along {as_written(name)}, km", "zz, E")
     for axes in (top, middle, bottom):
-        axes.legend(fontsize=6.5, ncols=6, loc="upper right", frameon=False)
+        if axes.get_legend_handles_labels()[0]:
+            axes.legend(fontsize=6.5, ncols=6, loc="upper right", frameon=False)
     return figure
 
 
@@ -168,8 +175,9 @@ def residual_histograms(
     row = figure.subplots(1, 6, sharey=True)
     for number, (axes, component) in enumerate(zip(row, COMPONENTS, strict=True)):
         for hue, (kind, residual) in zip(HUES, shown.items(), strict=False):
-            counts, _ = np.histogram((residual / sigma)[good, number], edges, density=True)
-            axes.step(middle, counts, where="mid", lw=0.9, color=hue, label=kind)
+            counts, _ = np.histogram((residual / sigma)[good, number], edges)
+            share = counts / (max(counts.sum(), 1) * (edges[1] - edges[0]))
+            axes.step(middle, share, where="mid", lw=0.9, color=hue, label=kind)
         axes.plot(middle, np.exp(-0.5 * middle**2) / np.sqrt(2 * np.pi), lw=0.8, ls="--", color=INK)
         axes.set_title(component, fontsize=8, color=INK)
         _tidy(axes, "residual / sd", "")

@@ -16,6 +16,7 @@ from gradred.export.sheet import (
     FAINT,
     INK,
     Ground,
+    as_written,
     colour_bar,
     crs_text,
     draw_field,
@@ -75,7 +76,11 @@ def map_sheet(
     draw_scale(axes, ground)
     colour_bar(figure, axes, image, unit_of(values))
     figure.suptitle(
-        f"{title_of(name)}  ·  {settings.survey_name}", fontsize=11, color=INK, x=0.02, ha="left"
+        f"{title_of(name)}  ·  {as_written(settings.survey_name)}",
+        fontsize=11,
+        color=INK,
+        x=0.02,
+        ha="left",
     )
     wide = int(18 * figure.get_figwidth())
     foot = "\n".join(textwrap.fill(line, wide) for line in _foot(grid, name, ground).split("\n"))
@@ -109,13 +114,18 @@ def _foot(grid: xr.Dataset, name: str, ground: Ground) -> str:
     if "shortest_wavelength" in about:
         worth.append(f"no wavelength below {float(about['shortest_wavelength']):.0f} m is resolved")
     if name.startswith("gradient_") and "sigma" in grid:
-        sigma = grid["sigma"].sel(component=name.removeprefix("gradient_")).to_numpy()
-        worth.append(f"standard deviation {np.nanmedian(sigma):.2g} E (median)")
+        sigma = grid["sigma"].sel(component=name.removeprefix("gradient_"))
+        worth += _deviation(sigma, "E")
     if name == "gz" and "sigma_gz" in grid:
-        worth.append(f"standard deviation {np.nanmedian(grid['sigma_gz']):.2g} mGal (median)")
+        worth += _deviation(grid["sigma_gz"], "mGal")
         worth.append("level and long wavelengths are not from this survey")
     worth.append("colours leave out half a per cent at either end")
     return "  ·  ".join(told) + "\n" + "  ·  ".join(worth) + f"\n{CAUTION}"
+
+
+def _deviation(sigma: xr.DataArray, unit: str) -> list[str]:
+    there = sigma.to_numpy()[np.isfinite(sigma.to_numpy())]
+    return [f"standard deviation {np.median(there):.2g} {unit} (median)"] if there.size else []
 
 
 def tensor_sheet(grid: xr.Dataset, survey_name: str) -> Figure:
@@ -137,7 +147,7 @@ def tensor_sheet(grid: xr.Dataset, survey_name: str) -> Figure:
     places[2, 0].text(
         0.0,
         0.0,
-        f"{survey_name}\n{_foot(grid, 'tensor', ground)}".replace("  ·  ", "\n"),
+        f"{as_written(survey_name)}\n{_foot(grid, 'tensor', ground)}".replace("  ·  ", "\n"),
         fontsize=8,
         color=INK,
         transform=places[2, 0].transAxes,

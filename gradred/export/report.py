@@ -118,7 +118,7 @@ def _flown(
         ["lines", ", ".join(f"{n} {kind}s" for kind, n in counts.items())],
         ["flown", f"{str(time.min())[:10]} to {str(time.max())[:10]}"],
     ]
-    if "clearance" in lines:
+    if "clearance" in lines and lines["clearance"].notnull().any():
         low, mid, high = np.nanpercentile(lines["clearance"].to_numpy(), [0, 50, 100])
         facts.append(["clearance", f"{mid:.0f} m (median), {low:.0f} to {high:.0f} m"])
     about = lines["terrain_height"].attrs if "terrain_height" in lines else {}

@@ -84,6 +84,11 @@ def title_of(name: str) -> str:
     return _TITLES.get(name, name.replace("_", " "))
 
 
+def as_written(text: str) -> str:
+    """Return a name so that a figure shows it as it is: dollar signs open no formula."""
+    return text.replace("$", r"\$")
+
+
 def unit_of(values: xr.DataArray) -> str:
     """Return the unit as it is printed."""
     unit = str(values.attrs.get("units", ""))
@@ -141,6 +146,8 @@ def _graticule(axes: Axes, ground: Ground, *, labels: bool) -> None:
         [(x, y) for x in (ground.west, ground.east) for y in (ground.south, ground.north)]
     )
     lon, lat = there.transform(corners[:, 0], corners[:, 1])
+    # a map across 180° keeps its corners together
+    lon = lon[0] + (lon - lon[0] + 180.0) % 360.0 - 180.0
     step = _minutes(max(np.ptp(lon), np.ptp(lat)))
     style: dict[str, Any] = {"color": INK, "linewidth": 0.35, "alpha": 0.45, "dashes": (6, 4)}
     small: dict[str, Any] = {"fontsize": 5.5, "color": INK, "alpha": 0.8}
@@ -152,7 +159,7 @@ def _graticule(axes: Axes, ground: Ground, *, labels: bool) -> None:
             axes.text(
                 top / 1e3,
                 ground.north / 1e3,
-                _angle(value, "EW"),
+                _angle(value, "EW", step),
                 ha="center",
                 va="bottom",
                 **small,
@@ -165,7 +172,7 @@ def _graticule(axes: Axes, ground: Ground, *, labels: bool) -> None:
             axes.text(
                 ground.east / 1e3,
                 side / 1e3,
-                " " + _angle(value, "NS"),
+                " " + _angle(value, "NS", step),
                 ha="left",
                 va="center",
                 **small,
@@ -178,9 +185,11 @@ def _minutes(span: float) -> float:
     return float(steps[np.argmin(np.abs(span / steps - 3.0))])
 
 
-def _angle(value: float, signs: str) -> str:
+def _angle(value: float, signs: str, step: float) -> str:
+    value = (value + 180.0) % 360.0 - 180.0
     degrees, minutes = divmod(round(abs(value) * 60.0, 2), 60.0)
-    return f"{degrees:.0f}°{minutes:02.0f}′{signs[0] if value >= 0 else signs[1]}"
+    told = f"{minutes:04.1f}" if step < 1.0 / 60.0 else f"{minutes:02.0f}"
+    return f"{degrees:.0f}°{told}′{signs[0] if value >= 0 else signs[1]}"
 
 
 def draw_scale(axes: Axes, ground: Ground) -> None:
