@@ -445,8 +445,12 @@ def open_part(path: Path) -> tuple[str, xr.Dataset]:
     with xr.open_dataset(path, engine="h5netcdf", decode_timedelta=False) as stored:
         data = stored.load()
     data.attrs.pop("Conventions", None)
+    # what an exported grid says beside for other programs
+    data = data.drop_vars("crs", errors="ignore")
     for name in data.variables:
         attrs: dict[str, Any] = data[name].attrs
+        for beside in ("grid_mapping", "standard_name", "axis"):
+            attrs.pop(beside, None)
         if "gradred_units" in attrs:
             attrs["units"] = attrs.pop("gradred_units")
         data[name].encoding = {}

@@ -5,6 +5,7 @@ from __future__ import annotations
 from pathlib import Path
 from typing import Any, Final
 
+import h5py
 import numpy as np
 import rasterio
 import xarray as xr
@@ -52,6 +53,7 @@ def write_grids(grid: xr.Dataset, settings: GridSettings, folder: Path) -> list[
     """Write the maps as GeoTIFF, north up, in the survey CRS, and as CF NetCDF."""
     made = [folder / "grid.nc"]
     survey.save("grid", _with_mapping(grid), made[0])
+    _georeferenced(made[0], str(grid.attrs["crs"]))
     if settings.geotiff:
         (folder / "grids").mkdir(exist_ok=True)
         for name, values in maps_of(grid).items():
@@ -63,6 +65,24 @@ def _with_mapping(grid: xr.Dataset) -> xr.Dataset:
     """Return the grid with its projection spelled out for CF readers in its attributes."""
     mapping = CRS.from_user_input(grid.attrs["crs"]).to_cf()
     return grid.assign_attrs(crs_wkt=mapping["crs_wkt"])
+
+
+def _georeferenced(path: Path, crs: str) -> None:
+    """Name the grid mapping of CF section 5.6 in a saved grid, and its axes as projected ones.
+
+    Added to the file behind ``survey.save``: the mapping belongs to the file, not to the survey.
+    """
+    with h5py.File(path, "r+") as stored:
+        mapping = stored.create_dataset("crs", data=np.int32(0))
+        for key, value in CRS.from_user_input(crs).to_cf().items():
+            mapping.attrs[key] = value
+        for name, axis in (("easting", "x"), ("northing", "y")):
+            stored[name].attrs["standard_name"] = f"projection_{axis}_coordinate"
+            stored[name].attrs["axis"] = axis.upper()
+        for row in survey.VARIABLES:
+            mapped = row.part == "grid" and row.dims[:2] == ("northing", "easting")
+            if mapped and row.name in stored:
+                stored[row.name].attrs["grid_mapping"] = "crs"
 
 
 def _geotiff(grid: xr.Dataset, name: str, values: xr.DataArray, path: Path) -> Path:

@@ -153,3 +153,15 @@ def test_another_part_and_a_grid_without_a_field_are_refused(tmp_path: Path) -> 
         "  cure:  deliver it, or put the stage that makes it before this one"
     )
     assert not list(tmp_path.iterdir())
+
+
+def test_a_general_library_finds_the_place_of_the_netcdf(tmp_path: Path) -> None:
+    write_grids(grid_of(), GridSettings(geotiff=False), tmp_path)
+    # GDAL's netCDF driver goes by the grid mapping and the axes of CF, section 5.6
+    with rasterio.open(f"netcdf:{tmp_path / 'grid.nc'}:gz") as raster:
+        assert raster.crs.to_epsg() == 32633
+        assert raster.transform.almost_equals(georeference(grid_of()))
+    with netCDF4.Dataset(tmp_path / "grid.nc") as stored:
+        assert stored["gradient"].grid_mapping == "crs"
+        assert stored["easting"].standard_name == "projection_x_coordinate"
+        assert stored["crs"].grid_mapping_name == "transverse_mercator"
