@@ -21,6 +21,9 @@ Easting = Annotated[Metres, Field(ge=-1e8, le=1e8)]
 Height = Annotated[Metres, Field(ge=-50_000, le=9000)]
 Size = Annotated[Metres, Field(ge=1, le=100_000)]
 Contrast = Annotated[float, Field(ge=-6000, le=6000)]
+Spread = Annotated[float, Field(gt=0, le=100_000)]
+
+_SD: Final = "standard deviation a priori of a parameter about its start, by name, in its unit"
 
 
 class SphereStart(Settings):
@@ -38,6 +41,7 @@ class SphereStart(Settings):
         ["radius"],
         description="parameters kept at their start; a sphere shows its mass, not its radius",
     )
+    sd: dict[str, Spread] = Field({}, description=_SD)
 
 
 class PrismStart(Settings):
@@ -52,6 +56,7 @@ class PrismStart(Settings):
     extent: Size = Field(ge=1, le=100_000, description="from top to bottom")
     density: Contrast = Field(ge=-6000, le=6000, description="density contrast, kg/m3")
     hold: list[str] = Field([], description="parameters kept at their start")
+    sd: dict[str, Spread] = Field({}, description=_SD)
 
 
 class SheetStart(Settings):
@@ -77,6 +82,7 @@ class SheetStart(Settings):
         ["thickness"],
         description="parameters kept at their start; a thin sheet shows thickness times contrast",
     )
+    sd: dict[str, Spread] = Field({}, description=_SD)
 
 
 Start = SphereStart | PrismStart | SheetStart
@@ -84,18 +90,34 @@ Start = SphereStart | PrismStart | SheetStart
 
 @dataclass(frozen=True)
 class Shape:
-    """Parameters of a kind of body with unit, step of the search and bounds, and its tensor."""
+    """A kind of body: its parameters with their units, the contrast last; its field; its volume.
+
+    ``unit_tensor`` takes parameters and points (n, 3) to (n, 6) E of 1 kg/m3, in the ``grid``
+    frame; ``volume`` takes parameters to m3.
+    """
 
     parameters: dict[str, str]
-    tensor: Callable[[Array, Array], Array]
+    unit_tensor: Callable[[Array, Array], Array]
+    volume: Callable[[Array], float]
+
+    def tensor(self, values: Array, points: Array) -> Array:
+        """Return the (n, 6) tensor, E, at (n, 3) points, ``grid``."""
+        return np.asarray(values[-1] * self.unit_tensor(values, points))
 
 
 _STEP: Final = {"m": 10.0, "degree": 1.0, "kg/m3": 20.0}
+# (0.1 m / 100 m)2 = 1e-6 of a derivative is cut off; 1e-13 of the field over 1e-3 of it is rounding
+_DERIVATIVE_STEP: Final = {"m": 0.1, "degree": 0.01}
 
 
 def step_of(unit: str) -> float:
     """Return how far a parameter of a unit moves to change the field by a like amount."""
     return _STEP[unit]
+
+
+def derivative_step_of(unit: str) -> float:
+    """Return half the step of a central difference in a parameter of a unit."""
+    return _DERIVATIVE_STEP[unit]
 
 
 def bounds_of(name: str) -> tuple[float, float]:
@@ -109,12 +131,12 @@ def bounds_of(name: str) -> tuple[float, float]:
 
 
 def _sphere(values: Array, points: Array) -> Array:
-    easting, northing, height, radius, density = values
-    return sphere_tensor(points, [[easting, northing, height]], [radius], [density])
+    easting, northing, height, radius, _ = values
+    return sphere_tensor(points, [[easting, northing, height]], [radius], [1.0])
 
 
 def _prism(values: Array, points: Array) -> Array:
-    easting, northing, top, width, length, extent, density = values
+    easting, northing, top, width, length, extent, _ = values
     box = [
         easting - 0.5 * width,
         easting + 0.5 * width,
@@ -123,13 +145,24 @@ def _prism(values: Array, points: Array) -> Array:
         top - extent,
         top,
     ]
-    return prism_tensor(points, [box], density)
+    return prism_tensor(points, [box], 1.0)
 
 
 def _sheet(values: Array, points: Array) -> Array:
-    *shape, density = values
-    vertices, faces = dipping_sheet(*shape)
-    return polyhedron_tensor(points, vertices, faces, density)
+    vertices, faces = dipping_sheet(*values[:-1])
+    return polyhedron_tensor(points, vertices, faces, 1.0)
+
+
+def _ball(values: Array) -> float:
+    return float(4.0 / 3.0 * np.pi * values[3] ** 3)
+
+
+def _box(values: Array) -> float:
+    return float(np.prod(values[3:6]))
+
+
+def _slab(values: Array) -> float:
+    return float(np.prod(values[5:8]))
 
 
 SHAPES: Final[dict[str, Shape]] = {
@@ -142,6 +175,7 @@ SHAPES: Final[dict[str, Shape]] = {
             "density": "kg/m3",
         },
         _sphere,
+        _ball,
     ),
     "prism": Shape(
         {
@@ -154,6 +188,7 @@ SHAPES: Final[dict[str, Shape]] = {
             "density": "kg/m3",
         },
         _prism,
+        _box,
     ),
     "sheet": Shape(
         {
@@ -168,5 +203,6 @@ SHAPES: Final[dict[str, Shape]] = {
             "density": "kg/m3",
         },
         _sheet,
+        _slab,
     ),
 }

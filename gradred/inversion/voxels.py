@@ -17,7 +17,7 @@ from gradred.errors import FitError
 from gradred.inversion.bodies import with_predictions
 from gradred.inversion.cautions import CAUTION
 from gradred.inversion.mesh import Mesh, mesh_under
-from gradred.mapping.layer import used_readings
+from gradred.inversion.readings import station_readings
 from gradred.newton.bodies import prism_tensor
 from gradred.newton.voxels import VoxelOperator
 from gradred.reduction.crossings import distance_along
@@ -354,13 +354,11 @@ def fit_voxels(
 ) -> xr.Dataset:
     """Fit the density contrast of a mesh under the terrain, as smooth as the noise allows."""
     survey.frame_of("lines", lines, "gradient", "enu", where="stage fit_voxels")
-    points, readings, sigma = used_readings(lines)
-    good = survey.good(lines)
-    _, line = np.unique(lines["line"].to_numpy().astype(str)[good], return_inverse=True)
-    at, data, spread = averaged(points, readings, sigma, line, settings.spacing)
+    used = station_readings(lines, where="stage fit_voxels")
+    at, data, spread = averaged(used.points, used.readings, used.sigma, used.line, settings.spacing)
     weights = np.where(np.isfinite(data), 1.0 / spread, 0.0)
     mesh = mesh_under(
-        terrain, points, settings.cell, settings.depth, settings.layers, settings.padding
+        terrain, used.points, settings.cell, settings.depth, settings.layers, settings.padding
     )
     progress(0.0, 1.0, "tensors of the mesh")
     operator = VoxelOperator(at, mesh.prisms, weights)
@@ -379,7 +377,8 @@ def fit_voxels(
     predicted = np.full((len(everywhere), 6), np.nan)
     whole = np.isfinite(everywhere).all(axis=1)
     predicted[whole] = prism_tensor(everywhere[whole], mesh.prisms, fit.density)
-    return with_predictions(out, lines, "voxels", predicted, fit.constants)
+    level = np.broadcast_to(fit.constants, predicted.shape)
+    return with_predictions(out, lines, "voxels", predicted, level, constants=fit.constants)
 
 
 def _told(model: xr.Dataset, mesh: Mesh, fit: VoxelFit) -> xr.Dataset:
