@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from gradred import survey
 from gradred.errors import FitError, SurveyError
 from gradred.mapping.layer import used_readings
+from gradred.tensor import enu_to_grid
 
 Array = NDArray[np.float64]
 
@@ -19,12 +20,15 @@ Array = NDArray[np.float64]
 class StationReadings:
     """Points (n, 3) m, readings and sd (n, 6) E, ``grid``, and the number of each one's line.
 
-    A component that holds nothing of its own is NaN.
+    ``sigma`` is that of the noise from reading to reading, ``common`` that of what levelling left
+    on a line, which no averaging along the line takes away; 0 where no line was levelled. A
+    component that holds nothing of its own is NaN.
     """
 
     points: Array
     readings: Array
     sigma: Array
+    common: Array
     line: NDArray[np.intp]
 
     @property
@@ -51,5 +55,9 @@ def station_readings(lines: xr.Dataset, *, where: str) -> StationReadings:
             cure="put estimate_noise before this stage",
         )
     points, readings, spread = used_readings(lines)
+    common = np.zeros_like(spread)
+    if "sigma_levelling" in lines:
+        turn = enu_to_grid(lines["convergence"].to_numpy()[good])
+        common = turn.spread(np.nan_to_num(lines["sigma_levelling"].to_numpy()[good]))
     _, line = np.unique(lines["line"].to_numpy().astype(str)[good], return_inverse=True)
-    return StationReadings(points, readings, spread, line)
+    return StationReadings(points, readings, spread, common, line)
