@@ -36,6 +36,14 @@ class StationReadings:
         """Number of readings, all components together."""
         return int(np.count_nonzero(np.isfinite(self.readings)))
 
+    def closed(self, level: Array) -> Array:
+        """Return (..., 6) constants fitted to the readings, zz by zero trace where it has none."""
+        if np.isfinite(self.readings[:, 5]).any():
+            return level
+        out = level.copy()
+        out[..., 5] = -out[..., 0] - out[..., 3]
+        return out
+
 
 def station_readings(lines: xr.Dataset, *, where: str) -> StationReadings:
     """Return the good readings of a survey, or refuse lines that have none or no noise."""

@@ -405,8 +405,9 @@ def fit_voxels(
     predicted = np.full((len(everywhere), 6), np.nan)
     whole = np.isfinite(everywhere).all(axis=1)
     predicted[whole] = prism_tensor(everywhere[whole], mesh.prisms, fit.density)
-    level = np.broadcast_to(fit.constants, predicted.shape)
-    return with_predictions(out, lines, "voxels", predicted, level, constants=fit.constants)
+    constants = used.closed(fit.constants)
+    level = np.broadcast_to(constants, predicted.shape)
+    return with_predictions(out, lines, "voxels", predicted, level, constants=constants)
 
 
 def _told(model: xr.Dataset, mesh: Mesh, fit: VoxelFit) -> xr.Dataset:
