@@ -258,11 +258,10 @@ def fit_bodies(
     predicted = np.full((len(everywhere), 6), np.nan)
     whole = np.isfinite(everywhere).all(axis=1)
     predicted[whole] = problem.tensor(fit.values, everywhere[whole])
-    regional = used.closed(fit.regional)
-    level = problem.trend(everywhere) @ regional
-    about: dict[str, Any] = {"constants": regional[0]}
+    level = problem.trend(everywhere) @ fit.regional
+    about: dict[str, Any] = {"constants": fit.regional[0]}
     if settings.regional == "linear":
-        about |= {"per_km_easting": regional[1], "per_km_northing": regional[2]}
+        about |= {"per_km_easting": fit.regional[1], "per_km_northing": fit.regional[2]}
     return with_predictions(out, lines, "bodies", predicted, level, **about)
 
 

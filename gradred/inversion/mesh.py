@@ -73,22 +73,7 @@ def mesh_under(
     below = np.concatenate([[0.0], np.cumsum(thickness)]) / thickness.sum() * depth
     tops = ground[None] - below[:-1, None, None]
     bottoms = ground[None] - below[1:, None, None]
-    _above(points, axes[0], axes[1], ground, cell)
     return Mesh(axes[0], axes[1], tops, bottoms, cell, float(points[:, 2].mean()))
-
-
-def _above(points: Array, easting: Array, northing: Array, ground: Array, cell: float) -> None:
-    """Refuse stations that stand inside a cell: their field would be that of its inside."""
-    column = np.floor((points[:, 0] - easting[0]) / cell + 0.5).astype(np.intp)
-    row = np.floor((points[:, 1] - northing[0]) / cell + 0.5).astype(np.intp)
-    depth = ground[row, column] - points[:, 2]
-    inside = int(np.count_nonzero(depth >= 0.0))
-    if inside:
-        raise FitError(
-            f"{inside} stations stand up to {depth.max():.0f} m below the top of their column",
-            where="stage fit_voxels",
-            cure=f"use columns narrower than {cell:g} m, or look at the heights of the terrain",
-        )
 
 
 def _ground(terrain: xr.Dataset, easting: Array, northing: Array, cell: float) -> Array:

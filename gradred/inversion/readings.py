@@ -11,7 +11,6 @@ from numpy.typing import NDArray
 from gradred import survey
 from gradred.errors import FitError, SurveyError
 from gradred.mapping.layer import used_readings
-from gradred.tensor import enu_to_grid
 
 Array = NDArray[np.float64]
 
@@ -20,29 +19,18 @@ Array = NDArray[np.float64]
 class StationReadings:
     """Points (n, 3) m, readings and sd (n, 6) E, ``grid``, and the number of each one's line.
 
-    ``sigma`` is that of the noise from reading to reading, ``common`` that of what levelling left
-    on a line, which no averaging along the line takes away; 0 where no line was levelled. A
-    component that holds nothing of its own is NaN.
+    A component that holds nothing of its own is NaN.
     """
 
     points: Array
     readings: Array
     sigma: Array
-    common: Array
     line: NDArray[np.intp]
 
     @property
     def count(self) -> int:
         """Number of readings, all components together."""
         return int(np.count_nonzero(np.isfinite(self.readings)))
-
-    def closed(self, level: Array) -> Array:
-        """Return (..., 6) constants fitted to the readings, zz by zero trace where it has none."""
-        if np.isfinite(self.readings[:, 5]).any():
-            return level
-        out = level.copy()
-        out[..., 5] = -out[..., 0] - out[..., 3]
-        return out
 
 
 def station_readings(lines: xr.Dataset, *, where: str) -> StationReadings:
@@ -63,9 +51,5 @@ def station_readings(lines: xr.Dataset, *, where: str) -> StationReadings:
             cure="put estimate_noise before this stage",
         )
     points, readings, spread = used_readings(lines)
-    common = np.zeros_like(spread)
-    if "sigma_levelling" in lines:
-        turn = enu_to_grid(lines["convergence"].to_numpy()[good])
-        common = turn.spread(np.nan_to_num(lines["sigma_levelling"].to_numpy()[good]))
     _, line = np.unique(lines["line"].to_numpy().astype(str)[good], return_inverse=True)
-    return StationReadings(points, readings, spread, common, line)
+    return StationReadings(points, readings, spread, line)
