@@ -125,8 +125,10 @@ def fit_shapes(
 
     Accuracy
     --------
-    That of the standard errors, for bodies of the stated kind. The minimum found is the lowest of
-    those next to the starts, not proven to be the lowest of all.
+    That of the standard errors, for bodies of the stated kind and what was held: over 60 seeds the
+    errors of a sphere were 0.88 standard errors rms with independent noise, and 1.00 to 1.03 with
+    drift of half to one sd of the noise left on the lines. The minimum found is the lowest of those
+    next to the starts, not proven to be the lowest of all.
 
     Source
     ------
@@ -216,8 +218,8 @@ def _mass_slope(kind: str, values: Array) -> Array:
 def _forecast(settings: BodySettings, sizes: Sizes) -> Cost:
     free = sum(len(SHAPES[b.kind].parameters) - len(b.hold) for b in settings.bodies)
     tensors = sizes["stations"] * (2.0 * free + len(settings.bodies))
-    # 20 steps of 1.2 us per tensor, and 10 copies of the Jacobian within the search
-    return Cost(1.0 + settings.starts * 20.0 * 1.2e-6 * tensors, 480.0 * sizes["stations"] * free)
+    # 20 steps of 1.6 us per tensor; the Jacobian of 48 bytes an entry row, and its copies: measured
+    return Cost(1.0 + settings.starts * 20.0 * 1.6e-6 * tensors, 1100.0 * sizes["stations"] * free)
 
 
 @stage(

@@ -96,12 +96,13 @@ def test_standard_errors_hold_with_drift_left_on_the_lines() -> None:
         model = fit_bodies(
             survey.put("lines", data, "gradient", drifted, frame="enu"), settings(["sphere"], seed)
         )
-        plain = fit_bodies(data, settings(["sphere"], seed))
         sd = model["body_sigma"].to_numpy()[0]
         free = sd > 0
         error = model["body_value"].to_numpy()[0] - np.append(TRUTH["sphere"], mass_of("sphere"))
         scores.append(error[free] / sd[free])
-        widened.append(sd[free] / plain["body_sigma"].to_numpy()[0][free])
+        if seed < 4:
+            plain = fit_bodies(data, settings(["sphere"], seed))
+            widened.append(sd[free] / plain["body_sigma"].to_numpy()[0][free])
     # 100 scores, some 60 of their own: 9 % sampling error, at 3 of it
     assert np.sqrt(np.mean(np.square(scores))) == pytest.approx(1.0, abs=0.3)
     # a drift of half the noise, common to the 51 readings of a line, counts
